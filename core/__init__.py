@@ -1,0 +1,1 @@
+"""Planimeter's core: queries as relational algebra, independent of any screen."""

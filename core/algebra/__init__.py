@@ -1,0 +1,1 @@
+"""What a query is: operators, scalars, types, graph walking, notation."""

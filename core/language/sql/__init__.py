@@ -1,0 +1,1 @@
+"""SQL read into the algebra and written from it."""
