@@ -41,3 +41,13 @@ def filled(form: str, arguments: Sequence[exp.Expression]) -> exp.Expression:
         if name.startswith(_HOLE):
             found.replace(arguments[int(name[len(_HOLE) :])])
     return node
+
+
+@lru_cache(maxsize=4096)
+def bound_arguments(form: str) -> frozenset[int]:
+    """The numbers of the arguments that stand beside an operator sign, where a weaker operator needs parentheses."""
+    return frozenset(
+        int(found.name[len(_HOLE) :])
+        for found in _template(form).find_all(exp.Placeholder)
+        if found.name.startswith(_HOLE) and not (isinstance(found.parent, exp.Func) and not isinstance(found.parent, exp.Binary))
+    )

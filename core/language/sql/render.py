@@ -1,0 +1,468 @@
+"""SELECT blocks printed: aliases chosen, columns named, clauses put in order."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Iterable, Mapping
+from dataclasses import dataclass, field
+from typing import cast
+
+from sqlglot import exp
+
+from core.algebra.operators import JoinKind, Relation, SetKind, TableFunction, Unnest, Values
+from core.algebra.scalars import (
+    FALSE,
+    TRUE,
+    Attribute,
+    Comparison,
+    ComparisonOperator,
+    IsTruth,
+    Literal,
+    Not,
+    Ref,
+    Scalar,
+    conjuncts,
+    refs,
+)
+from core.language.sql.blocks import (
+    Block,
+    Condition,
+    Item,
+    Nested,
+    Query,
+    SetQuery,
+    StepDefinition,
+    StepUse,
+    SubqueryTerm,
+    derived,
+)
+from core.language.sql.gather import WriteError, unique_names
+from core.language.sql.write_scalars import chained, level, within, write_scalar
+
+Names = Mapping[Attribute, str]
+
+
+@dataclass(slots=True)
+class View:
+    """What attributes are called where a scalar is printed: inside one block, with the blocks around it."""
+
+    block: Block | None = None
+    outer: View | None = None
+    places: dict[Attribute, tuple[str, str]] = field(default_factory=dict)
+    lone: bool = False
+    aliases: set[str] = field(default_factory=set)
+    output: set[str] = field(default_factory=set)
+
+    def around(self) -> set[str]:
+        """The aliases in use here and further out."""
+        found: set[str] = set()
+        view: View | None = self
+        while view is not None:
+            found |= view.aliases
+            view = view.outer
+        return found
+
+    def name(self, attribute: Attribute) -> exp.Expression:
+        """The expression that stands for an attribute."""
+        view: View | None = self
+        while view is not None:
+            if attribute in view.places:
+                alias, column = view.places[attribute]
+                clash = column.lower() in self.output
+                bare = view is self and view.lone and not clash
+                return exp.column(_identifier(column), table=None if bare or not alias else _identifier(alias))
+            if view.block is not None and attribute in view.block.definitions:
+                return _definition(view, attribute)
+            view = view.outer
+        raise WriteError(f"nothing gives {attribute.name} here")
+
+
+def _definition(view: View, attribute: Attribute) -> exp.Expression:
+    assert view.block is not None
+    definition = view.block.definitions[attribute]
+    if isinstance(definition, SubqueryTerm):
+        return write_term(definition, view)
+    return _inlined(write_scalar(definition, view.name))
+
+
+def _inlined(node: exp.Expression) -> exp.Expression:
+    return node if level(node) == 10 else exp.Paren(this=node)
+
+
+def _identifier(name: str) -> exp.Identifier:
+    return exp.to_identifier(name, quoted=not _plain(name))
+
+
+def _plain(name: str) -> bool:
+    return name.isidentifier() and name.isascii() and name.lower() not in _RESERVED
+
+
+_RESERVED = frozenset(
+    """
+    all analyse analyze and any array as asc asymmetric at between both by case cast check collate column constraint create
+    cross current_date current_time current_timestamp default deferrable desc describe distinct do else end except exists
+    false fetch filter following for foreign from full grant group grouping having if ilike in initially inner insert
+    intersect interval into is join key lambda lateral leading left like limit natural not null of offset on only or order
+    outer over overlaps partition pivot placing position preceding primary qualify range references returning right row rows
+    sample select set similar some summarize symmetric table then to trailing true unbounded union unique unnest unpivot
+    user using values variadic when where window with
+    """.split()
+)
+
+
+# --- queries -------------------------------------------------------------------------------------------------------
+
+
+def write_query_node(query: Query, outer: View | None, names: Names | None = None) -> exp.Query:
+    """A query as a sqlglot node. `names` are the output names by attribute (default: unique ones)."""
+    if isinstance(query, SetQuery):
+        return _set_query(query, outer, names)
+    return _select(query, outer, names)
+
+
+def _set_query(query: SetQuery, outer: View | None, names: Names | None) -> exp.Query:
+    shown = dict(names or unique_names(query.columns))
+    classes: dict[SetKind, type[exp.SetOperation]] = {
+        SetKind.UNION: exp.Union,
+        SetKind.INTERSECT: exp.Intersect,
+        SetKind.EXCEPT: exp.Except,
+    }
+    result: exp.Expression | None = None
+    for part in query.inputs:
+        own = {a: shown[mine] for a, mine in zip(part.columns, query.columns, strict=True)} if result is None else None
+        if own is not None and len(own) < len(part.columns):
+            part = derived(part)
+        node = cast(exp.Expression, write_query_node(part, outer, own))
+        if isinstance(part, SetQuery) or (isinstance(part, Block) and (part.order or part.count or part.offset)):
+            node = exp.Subquery(this=node)
+        result = node if result is None else classes[query.kind](this=result, expression=node, distinct=query.distinct)
+    assert isinstance(result, exp.Query)
+    view = View(places={a: ("", name) for a, name in shown.items()}, lone=True)
+    _tail(result, query, view, outer)
+    return result
+
+
+def _select(block: Block, outer: View | None, names: Names | None) -> exp.Query:
+    view = _view(block, outer)
+    select = exp.Select()
+    _from(select, block, view)
+    _where(select, "where", exp.Where, block.where, view)
+    shown = dict(names or unique_names(block.columns))
+    if block.keys is not None:
+        _group(select, block, view)
+    _where(select, "having", exp.Having, block.having, view)
+    _where(select, "qualify", exp.Qualify, block.qualify, view)
+    columns = [_column(attribute, shown[attribute], view) for attribute in block.columns]
+    select.set("expressions", columns or [exp.Literal.number(1)])
+    if block.distinct:
+        select.set("distinct", exp.Distinct())
+    ordering = View(block, outer, view.places, view.lone, view.aliases, {n.lower() for n in shown.values()})
+    _tail(select, block, ordering, outer, shown)
+    return select
+
+
+def _view(block: Block, outer: View | None) -> View:
+    """Chooses the aliases of the block's items, apart from each other and from those of the blocks around."""
+    view = View(block, outer)
+    taken = set() if outer is None else outer.around()
+    _place(block.items, view, taken)
+    view.lone = sum(1 for item in block.items for _ in _leaves(item)) == 1
+    return view
+
+
+def _leaves(item: Item) -> Iterable[Item]:
+    if isinstance(item.body, Nested):
+        for inner in item.body.items:
+            yield from _leaves(inner)
+    else:
+        yield item
+
+
+def _place(items: list[Item], view: View, taken: set[str]) -> None:
+    for item in items:
+        if isinstance(item.body, Nested):
+            _place(item.body.items, view, taken)
+            continue
+        name = item.alias or _natural_alias(item)
+        candidate, number = name, 1
+        while candidate.lower() in taken or candidate.lower() in view.aliases:
+            number += 1
+            candidate = f"{name}_{number}"
+        item.alias = candidate
+        view.aliases.add(candidate.lower())
+        for attribute, column in _item_columns(item).items():
+            view.places[attribute] = (candidate, column)
+
+
+def _natural_alias(item: Item) -> str:
+    match item.body:
+        case Relation(name=name):
+            return name.rpartition(".")[2]
+        case StepUse(name=name):
+            return name
+        case Values():
+            return "listed"
+        case TableFunction(call=call):
+            return call.name
+        case Unnest():
+            return "element"
+        case Block(items=items) if items:
+            first = next(iter(_leaves(items[0])))
+            return first.alias or _natural_alias(first)
+        case _:
+            return "part"
+
+
+def _item_columns(item: Item) -> dict[Attribute, str]:
+    match item.body:
+        case StepUse(columns=columns):
+            return columns
+        case Relation(attributes=own):
+            return {a: a.name for a in own}
+        case Block() | SetQuery():
+            return unique_names(item.body.columns)
+        case _:
+            return unique_names(item.attributes)
+
+
+def _column(attribute: Attribute, name: str, view: View) -> exp.Expression:
+    node = view.name(attribute)
+    while isinstance(node, exp.Paren):
+        node = node.this
+    if isinstance(node, exp.Column) and node.name == name:
+        return node
+    return exp.Alias(this=node, alias=_identifier(name))
+
+
+# --- clauses -------------------------------------------------------------------------------------------------------
+
+
+def _from(select: exp.Select, block: Block, view: View) -> None:
+    if not block.items:
+        return
+    first, *others = block.items
+    select.set("from_", exp.From(this=_item(first, view)))
+    select.set("joins", [_join(item, view) for item in others])
+
+
+def _join(item: Item, view: View) -> exp.Join:
+    body = item.body
+    node = _item(item, view)
+    side = {JoinKind.LEFT: "LEFT", JoinKind.RIGHT: "RIGHT", JoinKind.FULL: "FULL"}.get(item.kind)
+    if isinstance(body, Unnest):
+        if item.kind is JoinKind.LEFT:
+            return exp.Join(this=node, side="LEFT", on=exp.true())
+        return exp.Join(this=node, kind="CROSS")
+    if item.kind is JoinKind.INNER and item.on == TRUE:
+        return exp.Join(this=node, kind="CROSS")
+    return exp.Join(this=node, side=side, on=write_scalar(item.on, view.name))
+
+
+def _item(item: Item, view: View) -> exp.Expression:
+    alias = exp.TableAlias(this=_identifier(item.alias)) if item.alias else None
+    match item.body:
+        case Relation(name=name):
+            table = exp.Table(this=_identifier(name)) if "." not in name else _dotted(name)
+            if item.alias.lower() != name.rpartition(".")[2].lower():
+                table.set("alias", alias)
+            return table
+        case StepUse(name=name):
+            return exp.Table(this=_identifier(name), alias=alias if item.alias.lower() != name.lower() else None)
+        case Nested(items=items):
+            return _parenthesised(items, view)
+        case Values(attributes=own, rows=rows):
+            tuples = [exp.Tuple(expressions=[write_scalar(v, view.name) for v in row]) for row in rows]
+            return exp.Values(expressions=tuples, alias=_full_alias(item, unique_names(own)))
+        case TableFunction(call=call, attributes=own):
+            node = write_scalar(call, view.name)
+            return exp.Table(this=node, alias=_full_alias(item, unique_names(own)))
+        case Unnest(term=term):
+            offset = item.body.position is not None
+            node = write_scalar(term, view.name)
+            return exp.Unnest(
+                expressions=[node], alias=_full_alias(item, unique_names(item.attributes)), offset=offset or None
+            )
+        case Block() | SetQuery() as query:
+            around = view if item.lateral else view.outer
+            inner = exp.Subquery(this=write_query_node(query, around), alias=alias)
+            return exp.Lateral(this=exp.Subquery(this=inner.this), alias=alias) if item.lateral else inner
+
+
+def _dotted(name: str) -> exp.Table:
+    parts = [_identifier(part) for part in name.split(".")]
+    keys = ("this", "db", "catalog")
+    return exp.Table(**dict(zip(keys, reversed(parts), strict=False)))
+
+
+def _full_alias(item: Item, names: Names) -> exp.TableAlias:
+    return exp.TableAlias(this=_identifier(item.alias), columns=[_identifier(name) for name in names.values()])
+
+
+def _parenthesised(items: list[Item], view: View) -> exp.Expression:
+    first, *others = items
+    node = _item(first, view)
+    node.set("joins", [_join(item, view) for item in others])
+    return exp.Subquery(this=node)
+
+
+Clause = Callable[..., exp.Expression]
+
+
+def _where(select: exp.Select, key: str, clause: Clause, conditions: list[Condition], view: View) -> None:
+    if not conditions:
+        return
+    plain: list[Scalar] = []
+    terms: list[exp.Expression] = []
+
+    def settle() -> None:
+        if plain:
+            from core.algebra.scalars import conjunction
+
+            node = write_scalar(conjunction(plain), view.name)
+            terms.append(node)
+            plain.clear()
+
+    for condition in conditions:
+        if isinstance(condition, SubqueryTerm):
+            settle()
+            terms.append(write_term(condition, view))
+        else:
+            plain.append(condition)
+    settle()
+    select.set(key, clause(this=chained(exp.And, terms, 3)))
+
+
+def _group(select: exp.Select, block: Block, view: View) -> None:
+    assert block.keys is not None
+    written = {key: view.name(key) for key in block.keys}
+    for key, node in written.items():
+        while isinstance(node, exp.Paren):
+            node = node.this
+        written[key] = node
+    if block.sets is None:
+        if block.keys:
+            select.set("group", exp.Group(expressions=list(written.values())))
+        return
+    sets = [exp.Tuple(expressions=[written[key].copy() for key in part]) for part in block.sets]
+    select.set("group", exp.Group(expressions=[exp.GroupingSets(expressions=sets)]))
+
+
+def _tail(node: exp.Query, query: Query, view: View, outer: View | None, shown: Names | None = None) -> None:
+    """ORDER BY, LIMIT and OFFSET."""
+    keys = [key for key in query.order if not isinstance(key.term, Literal)]
+    if keys:
+        ordered: list[exp.Expression] = []
+        for key in keys:
+            if shown is not None and isinstance(key.term, Ref) and key.term.attribute in shown:
+                name = exp.column(_identifier(shown[key.term.attribute]))
+                ordered.append(exp.Ordered(this=name, desc=key.descending, nulls_first=key.nulls_first))
+            else:
+                ordered.append(write_scalar(key, view.name))
+        node.set("order", exp.Order(expressions=ordered))
+    free_view = View(outer=outer)
+    if query.ties and query.count is not None:
+        options = exp.LimitOptions(percent=False, rows=True, with_ties=True)
+        count = write_scalar(query.count, free_view.name)
+        node.set("limit", exp.Fetch(direction="FIRST", count=count, limit_options=options))
+    elif query.count is not None:
+        node.set("limit", exp.Limit(expression=write_scalar(query.count, free_view.name)))
+    if query.offset is not None:
+        node.set("offset", exp.Offset(expression=write_scalar(query.offset, free_view.name)))
+
+
+# --- subqueries as conditions and values ---------------------------------------------------------------------------
+
+
+def write_term(term: SubqueryTerm, view: View) -> exp.Expression:
+    """EXISTS, IN, NOT IN, a three-valued mark or a scalar subquery."""
+    if term.kind is JoinKind.SINGLE:
+        assert term.attribute is not None
+        return exp.Subquery(this=write_query_node(_selecting(term.query, (term.attribute,)), view))
+    if term.kind is JoinKind.SEMI:
+        return _membership(term.condition, term.query, view) or _exists(term.query, term.condition, view)
+    if term.kind is JoinKind.ANTI:
+        match term.condition:
+            case Not(term=IsTruth(term=inner, value=False)):
+                found = _membership(inner, term.query, view)
+                if found is not None:
+                    return exp.Not(this=found)
+        return exp.Not(this=_exists(term.query, term.condition, view))
+    if term.condition == TRUE:
+        return _exists(term.query, TRUE, view)
+    found = _membership(term.condition, term.query, view)
+    if found is not None:
+        return exp.Paren(this=found)
+    holds = _exists(term.query, term.condition, view)
+    from core.algebra.scalars import IsNull
+
+    unknown = _exists(term.query, IsNull(term.condition), view)
+    arms = [exp.If(this=holds, true=exp.true()), exp.If(this=unknown, true=exp.Null())]
+    return exp.Case(ifs=arms, default=exp.false())
+
+
+def _membership(condition: Scalar, query: Query, view: View) -> exp.Expression | None:
+    """`x IN (SELECT y ...)` for a single equality between something outside and something of the query."""
+    match condition:
+        case Comparison(operator=ComparisonOperator.EQUAL, left=left, right=right):
+            own = set(query.columns)
+            if refs(left) & own:
+                left, right = right, left
+            inner = refs(right)
+            if refs(left) & own or not isinstance(right, Ref) or not inner <= own:
+                return None
+            node = write_query_node(_selecting(query, (right.attribute,)), view)
+            return exp.In(this=within(write_scalar(left, view.name), 5), query=exp.Subquery(this=node))
+    return None
+
+
+def _selecting(query: Query, columns: tuple[Attribute, ...]) -> Query:
+    if query.columns == columns:
+        return query
+    if isinstance(query, SetQuery) or query.distinct:
+        query = derived(query)
+    return _copy(query, columns)
+
+
+def _copy(block: Query, columns: tuple[Attribute, ...]) -> Block:
+    from copy import copy
+
+    assert isinstance(block, Block)
+    made = copy(block)
+    made.columns = columns
+    made.items = [copy(item) for item in block.items]
+    return made
+
+
+def _exists(query: Query, condition: Scalar, view: View) -> exp.Expression:
+    from core.language.sql.blocks import Stage
+
+    terms = list(conjuncts(condition))
+    if isinstance(query, SetQuery) or query.stage > Stage.WHERE:
+        if not terms:
+            return exp.Exists(this=write_query_node(query, view))
+        query = derived(query)
+    block = _copy(query, ())
+    block.where = [*query.where, *terms]
+    if condition == FALSE:
+        block.where.append(FALSE)
+    return exp.Exists(this=_select(block, view, None))
+
+
+def steps_node(steps: list[StepDefinition]) -> exp.With | None:
+    """WITH, in order of definition."""
+    if not steps:
+        return None
+    written = []
+    for step in steps:
+        names = list(step.columns.values())
+        query = step.query
+        columns = None
+        if isinstance(query, SetQuery):
+            shown = dict(zip(query.columns, names, strict=True))
+            node = write_query_node(query, None, shown)
+            columns = [_identifier(name) for name in names] if step.recursive else None
+        else:
+            node = write_query_node(query, None, step.columns)
+        alias = exp.TableAlias(this=_identifier(step.name), columns=columns)
+        written.append(exp.CTE(this=node, alias=alias))
+    return exp.With(expressions=written, recursive=any(step.recursive for step in steps))
+
