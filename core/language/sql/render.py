@@ -36,7 +36,7 @@ from core.language.sql.blocks import (
     derived,
 )
 from core.language.sql.gather import WriteError, unique_names
-from core.language.sql.write_scalars import chained, level, within, write_scalar
+from core.language.sql.write_scalars import chained, within, write_scalar, written_terms
 
 Names = Mapping[Attribute, str]
 
@@ -81,11 +81,7 @@ def _definition(view: View, attribute: Attribute) -> exp.Expression:
     definition = view.block.definitions[attribute]
     if isinstance(definition, SubqueryTerm):
         return write_term(definition, view)
-    return _inlined(write_scalar(definition, view.name))
-
-
-def _inlined(node: exp.Expression) -> exp.Expression:
-    return node if level(node) == 10 else exp.Paren(this=node)
+    return write_scalar(definition, view.name)
 
 
 def _identifier(name: str) -> exp.Identifier:
@@ -315,10 +311,7 @@ def _where(select: exp.Select, key: str, clause: Clause, conditions: list[Condit
 
     def settle() -> None:
         if plain:
-            from core.algebra.scalars import conjunction
-
-            node = write_scalar(conjunction(plain), view.name)
-            terms.append(node)
+            terms.extend(written_terms(tuple(plain), view.name))
             plain.clear()
 
     for condition in conditions:
@@ -354,7 +347,7 @@ def _tail(node: exp.Query, query: Query, view: View, outer: View | None, shown: 
         for key in keys:
             if shown is not None and isinstance(key.term, Ref) and key.term.attribute in shown:
                 name = exp.column(_identifier(shown[key.term.attribute]))
-                ordered.append(exp.Ordered(this=name, desc=key.descending, nulls_first=key.nulls_first))
+                ordered.append(exp.Ordered(this=name, desc=key.descending or None, nulls_first=key.nulls_first))
             else:
                 ordered.append(write_scalar(key, view.name))
         node.set("order", exp.Order(expressions=ordered))
@@ -390,7 +383,7 @@ def write_term(term: SubqueryTerm, view: View) -> exp.Expression:
         return _exists(term.query, TRUE, view)
     found = _membership(term.condition, term.query, view)
     if found is not None:
-        return exp.Paren(this=found)
+        return found
     holds = _exists(term.query, term.condition, view)
     from core.algebra.scalars import IsNull
 

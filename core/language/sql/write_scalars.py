@@ -97,7 +97,7 @@ def write_scalar(node: Node, naming: Naming) -> exp.Expression:
             sides = [within(write_scalar(side, naming), 5) for side in (left, right)]
             return _COMPARISONS[operator](this=sides[0], expression=sides[1])
         case And(terms=terms):
-            return chained(exp.And, _with_ranges(terms, naming), 3)
+            return chained(exp.And, written_terms(terms, naming), 3)
         case Or(terms=terms):
             return chained(exp.Or, [write_scalar(term, naming) for term in terms], 2)
         case Not(term=term):
@@ -125,7 +125,7 @@ def write_scalar(node: Node, naming: Naming) -> exp.Expression:
         case Call():
             return _call(node, naming)
         case SortKey(term=term, descending=descending, nulls_first=nulls_first):
-            return exp.Ordered(this=write_scalar(term, naming), desc=descending, nulls_first=nulls_first)
+            return exp.Ordered(this=write_scalar(term, naming), desc=descending or None, nulls_first=nulls_first)
         case Aggregate():
             return _aggregate(node, naming)
         case WindowCall():
@@ -135,13 +135,15 @@ def write_scalar(node: Node, naming: Naming) -> exp.Expression:
 
 def chained(cls: type[exp.Expression], terms: list[exp.Expression], least: int) -> exp.Expression:
     """A left-deep chain of a connective."""
+    if len(terms) == 1:
+        return terms[0]
     result = within(terms[0], least)
     for term in terms[1:]:
         result = cls(this=result, expression=within(term, least))
     return result
 
 
-def _with_ranges(terms: tuple[Scalar, ...], naming: Naming) -> list[exp.Expression]:
+def written_terms(terms: tuple[Scalar, ...], naming: Naming) -> list[exp.Expression]:
     """The terms of a conjunction; `a >= x and a <= y` side by side is written BETWEEN."""
     found: list[exp.Expression] = []
     i = 0
