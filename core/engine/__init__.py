@@ -1,0 +1,1 @@
+"""Where data lives: run, profile, count. Always read-only towards the user's data."""

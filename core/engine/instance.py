@@ -1,0 +1,60 @@
+"""Small instances of a catalog's relations, made in memory: for witnesses and tests."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping, Sequence
+from datetime import date, datetime, time, timedelta
+from decimal import Decimal
+from typing import Any
+
+from core.catalog.ddl import ddl_of, in_reference_order
+from core.catalog.model import Catalog
+from core.engine.duckdb_engine import DuckEngine, quoted
+
+Instance = Mapping[str, Sequence[tuple[Any, ...]]]
+"""Rows by lower-case relation name, values in the order of the catalog's attributes, NULL as None."""
+
+
+def value_sql(value: object) -> str:
+    """A value as SQL."""
+    if value is None:
+        return "NULL"
+    if isinstance(value, bool):
+        return "TRUE" if value else "FALSE"
+    if isinstance(value, (int, Decimal)):
+        return str(value)
+    if isinstance(value, float):
+        return f"CAST('{value!r}' AS DOUBLE)"
+    if isinstance(value, datetime):
+        return f"TIMESTAMP '{value.isoformat(sep=' ')}'"
+    if isinstance(value, date):
+        return f"DATE '{value.isoformat()}'"
+    if isinstance(value, time):
+        return f"TIME '{value.isoformat()}'"
+    if isinstance(value, timedelta):
+        return f"INTERVAL '{value.total_seconds()} seconds'"
+    return "'" + str(value).replace("'", "''") + "'"
+
+
+def instance_sql(catalog: Catalog, data: Instance) -> str:
+    """A script that recreates the instance: CREATE TABLE with all constraints, then INSERT."""
+    return "\n".join([ddl_of(catalog), *_inserts(catalog, data)]) + "\n"
+
+
+def _inserts(catalog: Catalog, data: Instance) -> list[str]:
+    statements = []
+    for facts in in_reference_order(catalog):
+        rows = data.get(facts.name.lower(), ())
+        if rows:
+            listed = ",\n  ".join("(" + ", ".join(value_sql(value) for value in row) + ")" for row in rows)
+            table = ".".join(quoted(part) if not part.isidentifier() else part for part in facts.name.split("."))
+            statements.append(f"INSERT INTO {table} VALUES\n  {listed};")
+    return statements
+
+
+def create_instance(catalog: Catalog, data: Instance) -> DuckEngine:
+    """The instance in an engine of its own, with every constraint enforced: `EngineError` where the data break one."""
+    engine = DuckEngine(memory_limit="1GB", threads=1)
+    engine.load(statement for statement in ddl_of(catalog).split(";\n") if statement.strip())
+    engine.load(_inserts(catalog, data))
+    return engine
