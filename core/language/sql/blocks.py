@@ -49,6 +49,7 @@ class StepUse:
 
     name: str
     columns: dict[Attribute, str]
+    alias: str = ""
 
 
 @dataclass(slots=True)

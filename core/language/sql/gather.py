@@ -110,7 +110,7 @@ def _take(ready: dict[Operator, Query | StepUse], operator: Operator, readers: i
     found = ready[operator]
     if isinstance(found, StepUse):
         columns = tuple(found.columns)
-        return Block([Item(StepUse(found.name, dict(found.columns)), columns)], columns)
+        return Block([Item(StepUse(found.name, dict(found.columns)), columns, found.alias)], columns)
     # Blocks grow by absorption, so a second reader of a leaf or a correlated part needs one of its own.
     return deepcopy(found) if readers > 1 else found
 
@@ -134,7 +134,7 @@ def _as_step(operator: Operator, query: Query, uses: int, gathering: Gathering) 
     if isinstance(query, Block) and query.columns != attributes(operator):
         query = _with_columns(query, attributes(operator))
     gathering.steps.append(StepDefinition(name, query, columns, isinstance(operator, Fixpoint)))
-    return StepUse(name, columns)
+    return StepUse(name, columns, gathering.aliases.get(operator, "") if uses == 1 else "")
 
 
 def _free_name(name: str, gathering: Gathering) -> str:
@@ -352,8 +352,18 @@ def _group(operator: Group, below: Query) -> Block:
     return block
 
 
-def _reads_terms(block: Block, scalars: Sequence[Node]) -> bool:
-    """Whether a scalar reads a subquery's value through the block's definitions."""
+def reads_aggregates(block: Block) -> bool:
+    """Whether a column of the block is computed from an aggregate."""
+    return _reads_terms(block, [Ref(a) for a in block.columns], (Aggregate,))
+
+
+def reads_terms(block: Block | None, condition: Node) -> bool:
+    """Whether a condition reads a subquery's value through the block's definitions."""
+    return block is not None and _reads_terms(block, [condition])
+
+
+def _reads_terms(block: Block, scalars: Sequence[Node], kinds: tuple[type, ...] = (SubqueryTerm,)) -> bool:
+    """Whether a scalar reads a subquery's value (or another kind) through the block's definitions."""
     pending = list(refs(*scalars))
     seen: set[Attribute] = set()
     while pending:
@@ -362,9 +372,9 @@ def _reads_terms(block: Block, scalars: Sequence[Node]) -> bool:
             continue
         seen.add(attribute)
         definition = block.definitions.get(attribute)
-        if isinstance(definition, SubqueryTerm):
+        if isinstance(definition, kinds):
             return True
-        if definition is not None:
+        if definition is not None and not isinstance(definition, SubqueryTerm):
             pending.extend(refs(definition))
     return False
 
@@ -482,8 +492,8 @@ def _join_term(operator: Join, left: Query, right: Query) -> Block:
     """Semi-, anti-, mark and single joins, which SQL writes as conditions and values."""
     outer = dependent(operator) | refs(operator.condition)
     single = operator.kind in (JoinKind.SEMI, JoinKind.ANTI)
-    block = _block(left, Stage.HAVING if not single else Stage.HAVING)
-    computed = [a for a in outer if isinstance(block.definitions.get(a), (Aggregate, WindowCall, SubqueryTerm))]
+    block = _block(left, Stage.HAVING)
+    computed = _reads_terms(block, [Ref(a) for a in outer], (Aggregate, WindowCall, SubqueryTerm))
     if computed or _too_heavy(block, [Ref(a) for a in outer if a in block.definitions] * 2):
         block = derived(block)
     inner_names = right.hidden() if isinstance(right, Block) else set(right.columns)

@@ -10,7 +10,6 @@ from sqlglot import exp
 
 from core.algebra.operators import JoinKind, Relation, SetKind, TableFunction, Unnest, Values
 from core.algebra.scalars import (
-    FALSE,
     TRUE,
     Attribute,
     Comparison,
@@ -35,7 +34,7 @@ from core.language.sql.blocks import (
     SubqueryTerm,
     derived,
 )
-from core.language.sql.gather import WriteError, unique_names
+from core.language.sql.gather import WriteError, reads_aggregates, reads_terms, unique_names
 from core.language.sql.write_scalars import chained, within, write_scalar, written_terms
 
 Names = Mapping[Attribute, str]
@@ -62,26 +61,26 @@ class View:
         return found
 
     def name(self, attribute: Attribute) -> exp.Expression:
-        """The expression that stands for an attribute."""
-        view: View | None = self
-        while view is not None:
-            if attribute in view.places:
-                alias, column = view.places[attribute]
-                clash = column.lower() in self.output
-                bare = view is self and view.lone and not clash
-                return exp.column(_identifier(column), table=None if bare or not alias else _identifier(alias))
-            if view.block is not None and attribute in view.block.definitions:
-                return _definition(view, attribute)
-            view = view.outer
-        raise WriteError(f"nothing gives {attribute.name} here")
+        """The expression that stands for an attribute here."""
+        return self._named(attribute, self.lone)
 
+    def whole(self, attribute: Attribute) -> exp.Expression:
+        """The same with every column qualified, for use inside another block."""
+        return self._named(attribute, False)
 
-def _definition(view: View, attribute: Attribute) -> exp.Expression:
-    assert view.block is not None
-    definition = view.block.definitions[attribute]
-    if isinstance(definition, SubqueryTerm):
-        return write_term(definition, view)
-    return write_scalar(definition, view.name)
+    def _named(self, attribute: Attribute, bare: bool) -> exp.Expression:
+        if attribute in self.places:
+            alias, column = self.places[attribute]
+            plain = not alias or (bare and column.lower() not in self.output)
+            return exp.column(_identifier(column), table=None if plain else _identifier(alias))
+        if self.block is not None and attribute in self.block.definitions:
+            definition = self.block.definitions[attribute]
+            if isinstance(definition, SubqueryTerm):
+                return write_term(definition, self)
+            return write_scalar(definition, self.name if bare else self.whole)
+        if self.outer is None:
+            raise WriteError(f"nothing gives {attribute.name} here")
+        return self.outer._named(attribute, False)
 
 
 def _identifier(name: str) -> exp.Identifier:
@@ -146,6 +145,9 @@ def _select(block: Block, outer: View | None, names: Names | None) -> exp.Query:
     if block.keys is not None:
         _group(select, block, view)
     _where(select, "having", exp.Having, block.having, view)
+    if block.keys == () and block.sets is None and not block.having and not reads_aggregates(block):
+        # HAVING makes a single group of all rows where no aggregate in sight does (ISO/IEC 9075-2).
+        select.set("having", exp.Having(this=exp.true()))
     _where(select, "qualify", exp.Qualify, block.qualify, view)
     columns = [_column(attribute, shown[attribute], view) for attribute in block.columns]
     select.set("expressions", columns or [exp.Literal.number(1)])
@@ -306,21 +308,18 @@ Clause = Callable[..., exp.Expression]
 def _where(select: exp.Select, key: str, clause: Clause, conditions: list[Condition], view: View) -> None:
     if not conditions:
         return
+    # Conditions that no subquery is needed for come first; otherwise the order stays as it is.
     plain: list[Scalar] = []
-    terms: list[exp.Expression] = []
-
-    def settle() -> None:
-        if plain:
-            terms.extend(written_terms(tuple(plain), view.name))
-            plain.clear()
-
+    later: list[Condition] = []
     for condition in conditions:
-        if isinstance(condition, SubqueryTerm):
-            settle()
-            terms.append(write_term(condition, view))
+        if isinstance(condition, SubqueryTerm) or reads_terms(view.block, condition):
+            later.append(condition)
         else:
             plain.append(condition)
-    settle()
+    terms = written_terms(tuple(plain), view.name) if plain else []
+    for condition in later:
+        written = isinstance(condition, SubqueryTerm)
+        terms.append(write_term(condition, view) if written else write_scalar(condition, view.name))  # type: ignore[arg-type]
     select.set(key, clause(this=chained(exp.And, terms, 3)))
 
 
@@ -429,14 +428,15 @@ def _exists(query: Query, condition: Scalar, view: View) -> exp.Expression:
     from core.language.sql.blocks import Stage
 
     terms = list(conjuncts(condition))
-    if isinstance(query, SetQuery) or query.stage > Stage.WHERE:
+    if isinstance(query, SetQuery) or query.stage > Stage.HAVING:
         if not terms:
             return exp.Exists(this=write_query_node(query, view))
         query = derived(query)
     block = _copy(query, ())
-    block.where = [*query.where, *terms]
-    if condition == FALSE:
-        block.where.append(FALSE)
+    if query.stage >= Stage.GROUP:
+        block.having = [*query.having, *terms]
+    else:
+        block.where = [*query.where, *terms]
     return exp.Exists(this=_select(block, view, None))
 
 

@@ -1,0 +1,1 @@
+"""What follows from structure alone: keys, dependencies, nullability, lineage, null-rejection."""
