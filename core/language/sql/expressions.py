@@ -401,7 +401,7 @@ def cut(node: exp.Expression, block: Block) -> tuple[exp.Expression, tuple[Scala
             return value.copy()
         if isinstance(value, _WRAPPERS):
             return type(value)(**{key: visit(part) for key, part in value.args.items()})
-        if isinstance(value, exp.Query) or isinstance(value, exp.Order):
+        if isinstance(value, exp.Order) or (isinstance(value, exp.Query) and not isinstance(value, exp.Subquery)):
             raise block.reading.refuse(f"{value.key} inside {node.key}", value)
         arguments.append(read_scalar(value, block))
         return hole(len(arguments) - 1)

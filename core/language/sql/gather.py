@@ -339,8 +339,7 @@ def _distinct(below: Query) -> Query:
 def _group(operator: Group, below: Query) -> Block:
     block = _block(below, Stage.WHERE)
     used = [column.aggregate for column in operator.aggregates]
-    keyed: set[Attribute] = set(operator.keys)
-    constant = any(isinstance(block.definitions.get(key), (Literal, SubqueryTerm)) for key in keyed)
+    constant = any(isinstance(_meaning(block, key), (Literal, SubqueryTerm)) for key in operator.keys)
     if constant or _too_heavy(block, [*used, *(Ref(key) for key in operator.keys)]) or _reads_terms(block, used):
         block = derived(block)
     for column in operator.aggregates:
@@ -350,6 +349,14 @@ def _group(operator: Group, below: Query) -> Block:
     block.columns = attributes(operator)
     block.stage = Stage.GROUP
     return block
+
+
+def _meaning(block: Block, attribute: Attribute) -> Definition | None:
+    """What an attribute stands for in a block, mere names seen through."""
+    definition = block.definitions.get(attribute)
+    while isinstance(definition, Ref):
+        definition = block.definitions.get(definition.attribute)
+    return definition
 
 
 def reads_aggregates(block: Block) -> bool:

@@ -1,0 +1,66 @@
+"""Sizes: estimates with their derivations, guaranteed ranges, measured counts."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import replace
+
+from core.algebra.formulation import Formulation
+from core.algebra.graph import inputs, postorder
+from core.algebra.operators import Operator
+from core.catalog.model import Catalog
+from core.derive.facts import Facts
+from core.size.estimate import Estimate, estimate, width_of
+from core.size.guarantee import Bounds, bounds
+from core.size.model import Line, Size
+
+__all__ = ["Line", "Size", "size"]
+
+
+def size(
+    query: Formulation | Operator,
+    catalog: Catalog,
+    measured: Mapping[Operator, int] | None = None,
+    facts: Facts | None = None,
+) -> dict[Operator, Size]:
+    """The size of every operator of a formulation (or of a graph).
+
+    In a correlated part a size is for one outer row. `measured` are exact counts by operator, from `core.engine.measure`.
+    """
+    known = facts if facts is not None else Facts(catalog)
+    roots = query.roots() if isinstance(query, Formulation) else (query,)
+    estimates: dict[Operator, Estimate] = {}
+    ranges: dict[Operator, Bounds] = {}
+    sizes: dict[Operator, Size] = {}
+    order = postorder(*roots)
+    for operator in order:
+        below = [estimates[part] for part in inputs(operator)]
+        found = estimate(operator, below, catalog)
+        limits = bounds(operator, [ranges[part] for part in inputs(operator)], known)
+        found, clamped = _clamped(found, limits)
+        estimates[operator], ranges[operator] = found, limits
+        lines = found.lines if clamped is None else (*found.lines, clamped)
+        count = None if measured is None else measured.get(operator)
+        sizes[operator] = Size(
+            found.rows,
+            limits.low,
+            limits.high,
+            found.rows * width_of(found, operator),
+            found.evidence,
+            lines,
+            limits.reason,
+            count,
+        )
+    return sizes
+
+
+def _clamped(found: Estimate, limits: Bounds) -> tuple[Estimate, Line | None]:
+    """An estimate never leaves its guaranteed range."""
+    if found.rows < limits.low:
+        line = Line("no fewer than is guaranteed", f"max({found.rows:.6g}, {limits.low})", float(limits.low), found.evidence, limits.reason)
+        return replace(found, rows=float(limits.low)), line
+    if limits.high is not None and found.rows > limits.high:
+        line = Line("no more than is guaranteed", f"min({found.rows:.6g}, {limits.high})", float(limits.high), found.evidence, limits.reason)
+        return replace(found, rows=float(limits.high)), line
+    return found, None
+
