@@ -2,11 +2,13 @@
 
 from __future__ import annotations
 
+import math
 import threading
 from collections.abc import Callable, Iterable
 
 from core.algebra.formulation import Formulation
-from core.algebra.graph import free
+from core.algebra.graph import free, inputs
+from core.algebra.notation import is_product
 from core.algebra.operators import Operator, Values
 from core.engine.duckdb_engine import Cancelled, DuckEngine, EngineError
 from core.language.sql.write import WriteError, write_query
@@ -38,6 +40,10 @@ def measure(
             continue
         if isinstance(operator, Values):
             counts[operator] = len(operator.rows)
+            continue
+        if is_product(operator) and all(part in counts for part in inputs(operator)):
+            # A product's count needs no product.
+            counts[operator] = math.prod(counts[part] for part in inputs(operator))
             continue
         try:
             counts[operator] = _count(operator, engine, seconds)

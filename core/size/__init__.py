@@ -35,7 +35,7 @@ def size(
     order = postorder(*roots)
     for operator in order:
         below = [estimates[part] for part in inputs(operator)]
-        found = estimate(operator, below, catalog)
+        found = estimate(operator, below, catalog, estimates)
         limits = bounds(operator, [ranges[part] for part in inputs(operator)], known)
         found, clamped = _clamped(found, limits)
         estimates[operator], ranges[operator] = found, limits

@@ -6,7 +6,7 @@ from bisect import bisect_left, bisect_right
 from collections.abc import Sequence
 from dataclasses import dataclass, replace
 
-from core.algebra.types import Type, assumed_bytes
+from core.algebra.types import Family, Type, assumed_bytes
 from core.catalog.model import AttributeFacts, Evidence, Value
 from core.size.values import number, same_value
 
@@ -15,13 +15,15 @@ from core.size.values import number, same_value
 class Distribution:
     """`distinct` counts non-null values; `null_share` and the shares of `heavy` values are of all rows.
 
-    `bounds` are histogram bounds on the number line, each bucket holding the same number of the remaining rows.
+    `bounds` are histogram bounds on the number line (`texts` for text, which has no line), each bucket holding the same
+    number of the remaining rows.
     """
 
     distinct: float
     null_share: float = 0.0
     heavy: tuple[tuple[Value, float], ...] = ()
     bounds: tuple[float, ...] = ()
+    texts: tuple[str, ...] = ()
     low: float | None = None
     high: float | None = None
     width: float = 8.0
@@ -68,7 +70,7 @@ class Distribution:
             found += share if below else 0.0
         if self.rest_share <= 0:
             return found
-        fraction = self._fraction_below(place)
+        fraction = _text_fraction(self.texts, value) if isinstance(value, str) else self._fraction_below(place)
         if fraction is None:
             return None
         inside = self.rest_share / max(1.0, self.rest_distinct) if inclusive and 0 < fraction < 1 else 0.0
@@ -82,6 +84,17 @@ class Distribution:
         if self.rest_distinct < 0.5:
             return 0.0
         return None
+
+
+def _text_fraction(bounds: Sequence[str], value: str) -> float | None:
+    """The part of an equi-depth histogram of texts below a text; the middle of a bucket where it falls inside one."""
+    if len(bounds) < 2:
+        return None
+    if value <= bounds[0]:
+        return 0.0
+    if value > bounds[-1]:
+        return 1.0
+    return (bisect_left(bounds, value) - 0.5) / (len(bounds) - 1)
 
 
 def _histogram_fraction(bounds: Sequence[float], place: float) -> float:
@@ -110,7 +123,8 @@ def base_distribution(facts: AttributeFacts | None, type_: Type, rows: float) ->
         distinct=distinct,
         null_share=min(1.0, (known.nulls or 0) / total),
         heavy=tuple((hitter.value, min(1.0, hitter.rows / total)) for hitter in known.heavy),
-        bounds=tuple(place for place in places if place is not None),
+        bounds=() if type_.family is Family.TEXT else tuple(place for place in places if place is not None),
+        texts=tuple(bound for bound in known.histogram if isinstance(bound, str)),
         low=number(known.low),
         high=number(known.high),
         width=known.width if known.width is not None else float(assumed_bytes(type_)),

@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Mapping
 from dataclasses import dataclass, replace
 
-from core.algebra.graph import attributes
+from core.algebra.graph import attributes, dependent, inputs
 from core.algebra.notation import name_of
 from core.algebra.operators import (
     Distinct,
@@ -29,11 +29,20 @@ from core.algebra.operators import (
     Values,
     Window,
 )
-from core.algebra.scalars import Attribute, Literal, Ref, conjunction, conjuncts
+from core.algebra.scalars import (
+    Attribute,
+    Comparison,
+    ComparisonOperator,
+    Literal,
+    Ref,
+    Scalar,
+    conjunction,
+    conjuncts,
+)
 from core.algebra.types import assumed_bytes
 from core.algebra.typing import type_of
 from core.catalog.model import Catalog, Evidence, Value
-from core.size.distribution import Distribution, base_distribution, groups, thinned
+from core.size.distribution import Distribution, base_distribution, groups, remaining_distinct, thinned
 from core.size.guarantee import equalities
 from core.size.model import Line
 from core.size.selectivity import RANGE_GUESS, Share, figure, share_of
@@ -54,8 +63,11 @@ class Estimate:
     lines: tuple[Line, ...] = ()
 
 
-def estimate(operator: Operator, below: list[Estimate], catalog: Catalog) -> Estimate:
-    """The estimate of an operator from those of its inputs. In a correlated part it is for one outer row."""
+def estimate(operator: Operator, below: list[Estimate], catalog: Catalog, known: Mapping[Operator, Estimate]) -> Estimate:
+    """The estimate of an operator from those of its inputs. In a correlated part it is for one outer row.
+
+    `known` holds the estimates of everything below.
+    """
     match operator:
         case Relation():
             return _relation(operator, catalog)
@@ -70,7 +82,7 @@ def estimate(operator: Operator, below: list[Estimate], catalog: Catalog) -> Est
         case Project():
             return _project(operator, below[0])
         case Join():
-            return _join(operator, below[0], below[1])
+            return _join(operator, below[0], below[1], known)
         case SetOperation():
             return _set_operation(operator, below)
         case Distinct():
@@ -221,7 +233,7 @@ def _equal_share(operator: Join, left: Estimate, right: Estimate) -> tuple[Share
     return Share(value, tuple(lines), evidence), pairs
 
 
-def _join(operator: Join, left: Estimate, right: Estimate) -> Estimate:
+def _join(operator: Join, left: Estimate, right: Estimate, known: Mapping[Operator, Estimate]) -> Estimate:
     spread: Spread = {**left.spread, **right.spread}
     equal, pairs = _equal_share(operator, left, right)
     equated = {frozenset(pair) for pair in pairs}
@@ -235,7 +247,7 @@ def _join(operator: Join, left: Estimate, right: Estimate) -> Estimate:
     lines = tuple(line for share in shares for line in share.lines)
     kind = operator.kind
     if kind in (JoinKind.SEMI, JoinKind.ANTI, JoinKind.MARK, JoinKind.SINGLE):
-        return _half_join(operator, left, right, pairs, value, evidence, lines)
+        return _half_join(operator, left, right, pairs, value, evidence, lines, known)
     product = left.rows * right.rows
     formula = " × ".join([figure(left.rows), figure(right.rows), *(figure(share.value) for share in shares)])
     text = "left rows × right rows" + (" × share of pairs kept" if shares else "")
@@ -248,8 +260,6 @@ def _join(operator: Join, left: Estimate, right: Estimate) -> Estimate:
 
 
 def _is_pair(term: object, equated: set[frozenset[Attribute]]) -> bool:
-    from core.algebra.scalars import Comparison, ComparisonOperator
-
     return (
         isinstance(term, Comparison)
         and term.operator is ComparisonOperator.EQUAL
@@ -306,6 +316,42 @@ def _matching(left: Estimate, right: Estimate, pairs: list[tuple[Attribute, Attr
     return min(1.0, partners), f"min(1, {figure(right.rows)} × {figure(share)})", "expected partners a row"
 
 
+def _correlated(
+    operator: Join, left: Estimate, right: Estimate, known: Mapping[Operator, Estimate]
+) -> tuple[float, str, str] | None:
+    """The share of left rows with a partner where the right side equates its attributes with the left row's."""
+    outer = dependent(operator)
+    found: tuple[float, str, str] | None = None
+    pending: list[Operator] = [operator.right] if outer else []
+    while pending:
+        part = pending.pop()
+        if isinstance(part, Select):
+            for term in conjuncts(part.condition):
+                have = _equated(term, outer, left, known[part.input], right.rows)
+                if have is not None and (found is None or have[0] < found[0]):
+                    found = have
+        if isinstance(part, (Select, Project, Join)):
+            pending.extend(inputs(part))
+    return found
+
+
+def _equated(
+    term: Scalar, outer: frozenset[Attribute], left: Estimate, inner: Estimate, partners: float
+) -> tuple[float, str, str] | None:
+    match term:
+        case Comparison(operator=ComparisonOperator.EQUAL, left=Ref(attribute=a), right=Ref(attribute=b)):
+            mine, theirs = (a, b) if a in outer else (b, a)
+            if mine not in outer or theirs not in inner.spread or mine not in left.spread:
+                return None
+            own, other = left.spread[mine], inner.spread[theirs]
+            kept = min(1.0, partners * max(1.0, other.distinct) / max(inner.rows, 1e-9))
+            values = remaining_distinct(other.distinct, inner.rows, kept)
+            have = min(1.0, values / max(1.0, own.distinct)) * (1 - own.null_share)
+            formula = f"min(1, {figure(values)} ÷ {figure(max(1.0, own.distinct))}) × {figure(1 - own.null_share)}"
+            return have, formula, "containment of value sets"
+    return None
+
+
 def _half_join(
     operator: Join,
     left: Estimate,
@@ -314,6 +360,7 @@ def _half_join(
     share: float,
     evidence: Evidence,
     lines: tuple[Line, ...],
+    known: Mapping[Operator, Estimate],
 ) -> Estimate:
     if operator.kind in (JoinKind.MARK, JoinKind.SINGLE):
         spread = {**left.spread}
@@ -322,7 +369,7 @@ def _half_join(
         elif operator.mark is not None:
             spread[operator.mark] = Distribution(2.0, width=1.0)
         return Estimate(left.rows, spread, left.evidence, (_same(left),))
-    have, formula, method = _matching(left, right, pairs, share)
+    have, formula, method = _correlated(operator, left, right, known) or _matching(left, right, pairs, share)
     first = Line("share of left rows with a partner", formula, have, evidence, method)
     kept = have if operator.kind is JoinKind.SEMI else 1 - have
     text = "left rows × share with a partner" if operator.kind is JoinKind.SEMI else "left rows × share without a partner"

@@ -215,7 +215,7 @@ def _against_constant(
     if operator in (ComparisonOperator.UNEQUAL, ComparisonOperator.DISTINCT):
         equal = found.share_of(value)
         null = found.null_share if operator is ComparisonOperator.UNEQUAL else 0.0
-        formula = f"1 - {figure(null)} - {figure(equal)}"
+        formula = f"max(0, 1 - {figure(null)} - {figure(equal)})"
         return _line(text, formula, 1 - null - equal, found.evidence, _equal_source(found))
     inclusive = operator in (ComparisonOperator.AT_MOST, ComparisonOperator.GREATER)
     below = found.share_below(value, inclusive) if found.evidence > Evidence.ASSUMED else None
@@ -223,8 +223,9 @@ def _against_constant(
         return _line(text, figure(RANGE_GUESS), RANGE_GUESS, Evidence.ASSUMED, "System R 1979")
     if operator in _UPPER:
         return _line(text, figure(below), below, found.evidence, "histogram and heavy hitters")
-    formula = f"1 - {figure(found.null_share)} - {figure(below)}"
-    return _line(text, formula, 1 - found.null_share - below, found.evidence, "histogram and heavy hitters")
+    formula = f"max(0, 1 - {figure(found.null_share)} - {figure(below)})"
+    value = 1 - found.null_share - below
+    return _line(text, formula, value, found.evidence, "histogram and heavy hitters")
 
 
 def _equal_formula(found: Distribution, value: object, share: float) -> tuple[str, float]:
@@ -333,11 +334,14 @@ def _like(term: Call, text: str, spread: Spread) -> Share:
     if found.rest_share <= 1e-9:
         return _line(text, figure(sure), sure, found.evidence, "heavy hitters")
     prefix = re.split(r"[%_]", pattern, maxsplit=1)[0]
-    if prefix and term.name == "like" and found.bounds:
+    if prefix and term.name == "like" and found.texts:
         low, high = found.share_below(prefix, False), found.share_below(prefix + "\U0010ffff", False)
         if low is not None and high is not None:
-            value = max(0.0, high - low)
-            return _line(text, f"{figure(high)} - {figure(low)}", value, found.evidence, "histogram of the prefix")
+            # A prefix that falls within one bucket may hold anything up to that bucket: half of it is taken.
+            least = 0.5 * found.rest_share / (len(found.texts) - 1) if found.heavy_share < high else 0.0
+            value = max(least, high - low)
+            formula = f"max({figure(least)}, {figure(high)} - {figure(low)})"
+            return _line(text, formula, value, found.evidence, "histogram of the prefix")
     value = sure + found.rest_share * LIKE_GUESS
     formula = f"{figure(sure)} + {figure(found.rest_share)} × {LIKE_GUESS}"
     return _line(text, formula, value, Evidence.ASSUMED, "heavy hitters, and a guess for the rest")

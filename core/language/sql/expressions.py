@@ -34,6 +34,7 @@ from core.algebra.scalars import (
 )
 from core.algebra.types import (
     BIGINT,
+    BOOLEAN,
     DOUBLE,
     HUGEINT,
     INTEGER,
@@ -367,6 +368,14 @@ def _interval(node: exp.Expression, block: Block) -> Scalar:
     return _whole(node, block)
 
 
+def _like(node: exp.Expression, block: Block) -> Scalar:
+    """LIKE and ILIKE; sqlglot keeps a NOT before them as a flag."""
+    arguments = tuple(read_scalar(node.args[key], block) for key in ("this", "expression"))
+    form = form_of(type(node)(this=hole(0), expression=hole(1)))
+    call = Call("like" if isinstance(node, exp.Like) else "ilike", arguments, BOOLEAN, form)
+    return Not(call) if node.args.get("negate") else call
+
+
 def _lone_star(node: exp.Expression, block: Block) -> Scalar:
     raise block.reading.refuse("a star has no place here", node)
 
@@ -438,6 +447,8 @@ _READERS: dict[type[exp.Expression], Callable[[exp.Expression, Block], Scalar]] 
     exp.TryCast: _cast,
     exp.Neg: _negative,
     exp.Interval: _interval,
+    exp.Like: _like,
+    exp.ILike: _like,
     exp.Star: _lone_star,
     exp.Exists: lambda node, block: subqueries.mark_exists(node, block),
     exp.Subquery: lambda node, block: subqueries.scalar_value(node, block),

@@ -166,7 +166,14 @@ def written_terms(terms: tuple[Scalar, ...], naming: Naming) -> list[exp.Express
 
 
 def _negated(term: Scalar, naming: Naming) -> exp.Expression:
-    return exp.Not(this=within(write_scalar(term, naming), 4))
+    inner = write_scalar(term, naming)
+    if isinstance(term, IsNull):
+        inner.set("expression", exp.Not(this=exp.Null()))
+        return inner
+    if isinstance(inner, (exp.Like, exp.ILike)) and not inner.args.get("negate"):
+        inner.set("negate", True)
+        return inner
+    return exp.Not(this=within(inner, 4))
 
 
 def _arithmetic(node: Arithmetic, naming: Naming) -> exp.Expression:
