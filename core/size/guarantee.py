@@ -206,7 +206,7 @@ def equalities(condition: Scalar, left: set[Attribute], right: set[Attribute]) -
 def _join(operator: Join, left: Bounds, right: Bounds, facts: Facts) -> Bounds:
     kind = operator.kind
     if kind in (JoinKind.SEMI, JoinKind.ANTI):
-        if kind is JoinKind.SEMI and left.high is not None and _always_matched(operator, facts, right):
+        if kind is JoinKind.SEMI and left.high is not None and always_matched(operator, facts):
             return left
         return Bounds(0, left.high, left.degree, left.distinct, left.reason)
     if kind is JoinKind.MARK:
@@ -270,7 +270,7 @@ def _inner(
     degree = {x: d * partners_right for x, d in left.degree.items()} if partners_right is not None else {}
     if partners_left is not None and not free(operator.right):
         degree.update({x: d * partners_left for x, d in right.degree.items()})
-    low = left.low if _always_matched(operator, facts, right) else 0
+    low = left.low if always_matched(operator, facts) else 0
     if low == 0 and operator.condition == TRUE:
         low = left.low * right.low
     return Bounds(low, high, degree, {**left.distinct, **right.distinct}, reason)
@@ -280,7 +280,7 @@ def _fixed(facts: Facts, operator: Operator) -> frozenset[Attribute]:
     return facts.of(operator).constants
 
 
-def _always_matched(operator: Join, facts: Facts, right: Bounds) -> bool:
+def always_matched(operator: Join, facts: Facts) -> bool:
     """Whether a declared foreign key gives every left row a partner: the right side is the whole relation referred to."""
     whole = _whole_relation(operator.right)
     if whole is None:

@@ -31,9 +31,11 @@ from core.algebra.operators import (
     Window,
 )
 from core.algebra.scalars import (
+    FALSE,
     TRUE,
     Aggregate,
     Attribute,
+    Cast,
     Comparison,
     ComparisonOperator,
     Literal,
@@ -183,6 +185,8 @@ def _absorb(operator: Operator, below: list[Query], gathering: Gathering) -> Que
         case Values(attributes=own, rows=rows):
             if not own and len(rows) == 1:
                 return Block()
+            if not rows:
+                return _empty(own)
             return Block([Item(operator, own)], own)
         case TableFunction(attributes=own, alias=alias):
             return Block([Item(operator, own, alias)], own)
@@ -218,6 +222,14 @@ def _absorb(operator: Operator, below: list[Query], gathering: Gathering) -> Que
             raise WriteError("a nested relation has no form in SQL yet")
 
 
+def _empty(own: tuple[Attribute, ...]) -> Block:
+    """No rows, with the types of the attributes: a condition that is never true."""
+    block = Block(columns=own, where=[FALSE], stage=Stage.WHERE)
+    for attribute in own:
+        block.definitions[attribute] = Cast(Literal(None, attribute.type), attribute.type)
+    return block
+
+
 def _open(query: Query) -> Query:
     """A query that may stand in a set operation: one without its own order or limit keeps its shape."""
     return derived(query) if query.stage >= Stage.ORDER else query
@@ -243,6 +255,9 @@ def _select(operator: Select, below: Query, gathering: Gathering) -> Block:
     highest = Stage.QUALIFY if gathering.dialect in QUALIFY_DIALECTS else Stage.HAVING
     block = _block(below, highest)
     if _too_heavy(block, [operator.condition]):
+        block = derived(block)
+    if block.stage >= Stage.WINDOW and not _reads_terms(block, [operator.condition], (WindowCall,)):
+        # QUALIFY is for conditions on windows; another condition would read as one.
         block = derived(block)
     _add_condition(block, list(conjuncts(operator.condition)) or [TRUE])
     return block

@@ -119,6 +119,8 @@ def write_scalar(node: Node, naming: Naming) -> exp.Expression:
             absent = isinstance(otherwise, Literal) and otherwise.text is None
             return exp.Case(ifs=ifs, default=None if absent else write_scalar(otherwise, naming))
         case Cast(term=term, type=type_, lenient=lenient):
+            if type_.family in (Family.UNKNOWN, Family.NULL):
+                return write_scalar(term, naming)
             to = exp.DataType.build(type_.name, dialect="duckdb")
             cls = exp.TryCast if lenient else exp.Cast
             return cls(this=write_scalar(term, naming), to=to)
