@@ -40,7 +40,7 @@ class Formulation:
 
     `names` are the steps: operators that the text defines by name (common table expressions). `aliases` are what the
     text calls a derived table, or one use of a step (then the operator is the renaming over the step). `spans` say where in `text` an operator was written. Both are kept by operator identity; after a rewrite an operator
-    that is only rebuilt over changed inputs keeps its name and span.
+    that is only rebuilt over changed inputs keeps its name and span; `rewritten` says that `text` is no longer its text.
     """
 
     outputs: tuple[Output, ...]
@@ -49,6 +49,7 @@ class Formulation:
     spans: Mapping[Operator, Span] = field(default_factory=dict)
     text: str = ""
     dialect: str = "duckdb"
+    rewritten: bool = False
 
     def __post_init__(self) -> None:
         if not self.outputs:
@@ -82,4 +83,4 @@ class Formulation:
             {became.get(old, old): value for old, value in known.items()}
             for known in (self.names, self.aliases, self.spans)
         )
-        return replace(self, outputs=outputs, names=names, aliases=aliases, spans=spans)  # type: ignore[arg-type]
+        return replace(self, outputs=outputs, names=names, aliases=aliases, spans=spans, rewritten=True)  # type: ignore[arg-type]

@@ -3,12 +3,13 @@
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
+from dataclasses import replace
 from datetime import date, datetime, time, timedelta
 from decimal import Decimal
 from typing import Any
 
 from core.catalog.ddl import ddl_of, in_reference_order
-from core.catalog.model import Catalog
+from core.catalog.model import Catalog, catalog_of
 from core.engine.duckdb_engine import DuckEngine, quoted
 
 Instance = Mapping[str, Sequence[tuple[Any, ...]]]
@@ -50,6 +51,21 @@ def _inserts(catalog: Catalog, data: Instance) -> list[str]:
             table = ".".join(quoted(part) if not part.isidentifier() else part for part in facts.name.split("."))
             statements.append(f"INSERT INTO {table} VALUES\n  {listed};")
     return statements
+
+
+def table_scripts(catalog: Catalog) -> list[str]:
+    """CREATE TABLE statements with types and CHECKs only, for data whose keys are kept by whoever makes it."""
+    loose = catalog_of(
+        replace(
+            facts,
+            primary=None,
+            unique=(),
+            foreign_keys=(),
+            attributes=tuple(replace(a, nullable=True) for a in facts.attributes),
+        )
+        for facts in catalog
+    )
+    return [statement for statement in ddl_of(loose).split(";\n") if statement.strip()]
 
 
 def create_instance(catalog: Catalog, data: Instance) -> DuckEngine:

@@ -1,0 +1,103 @@
+"""Proof of equality: both sides brought to a normal form by tested rewrites, then compared as canonical texts."""
+
+from __future__ import annotations
+
+import threading
+import time
+from dataclasses import dataclass
+
+from core.algebra.formulation import Formulation
+from core.algebra.operators import Sort
+from core.catalog.model import Catalog
+from core.compare.canonical import NoForm, canonical
+from core.derive.facts import Facts
+from core.rewrite import Offer, attempts, rule_named
+from core.rewrite.context import Context
+
+# In order of use. Each one takes something away or moves a selection down, so the chain ends.
+NORMALISING = tuple(
+    rule_named(name)
+    for name in (
+        "contradiction-to-empty",
+        "drop-tautology",
+        "mark-to-half-join",
+        "not-in-to-not-exists",
+        "simplify-outer-join",
+        "null-test-to-anti-join",
+        "narrow-projection",
+        "drop-idle-aggregates",
+        "drop-sort",
+        "drop-distinct",
+        "eliminate-join",
+        "join-to-semi-join",
+        "scalar-aggregate-to-join",
+        "single-to-left-join",
+        "count-distinct-to-count",
+        "group-on-key",
+        "union-to-union-all",
+        "flatten-union",
+        "set-operation-to-half-join",
+        "push-selection-below-grouping",
+        "push-selection-below-set-operation",
+        "push-selection-below-window",
+        "push-selection-below-distinct-or-sort",
+        "merge-projections",
+    )
+)
+_MOST_STEPS = 150
+
+
+@dataclass(frozen=True, slots=True)
+class ProofStep:
+    """One step of a proof: which side, the rule's title and law, and what it did, in words."""
+
+    side: str
+    title: str
+    law: str
+    what: str
+
+
+@dataclass(frozen=True, slots=True)
+class Normal:
+    """A normal form with the steps that led to it; `text` None where there is no canonical text, `why` says so."""
+
+    formulation: Formulation
+    text: str | None
+    steps: tuple[ProofStep, ...]
+    why: str = ""
+
+
+def normal_form(
+    formulation: Formulation, catalog: Catalog, side: str, seconds: float = 5.0, cancel: threading.Event | None = None
+) -> Normal:
+    """Brings a formulation to its normal form. Order by the answer itself is left to the caller: the text is of a bag."""
+    facts = Facts(catalog)
+    ends = time.monotonic() + seconds
+    steps: list[ProofStep] = []
+    current = formulation
+    while len(steps) < _MOST_STEPS and time.monotonic() < ends and not (cancel is not None and cancel.is_set()):
+        offer = _next(current, facts)
+        if offer is None:
+            break
+        steps.append(ProofStep(side, offer.rule.title, offer.rule.law, offer.what))
+        current = offer.after
+    output = current.outputs[-1]
+    root = output.operator
+    while isinstance(root, Sort):
+        root = root.input
+    try:
+        text = canonical(root, [a for a, _ in output.columns])
+    except NoForm as reason:
+        return Normal(current, None, tuple(steps), str(reason))
+    return Normal(current, text, tuple(steps))
+
+
+def _next(current: Formulation, facts: Facts) -> Offer | None:
+    context = Context(current, facts)
+    operators = current.operators()
+    for rule in NORMALISING:
+        for operator in operators:
+            for answer in attempts(context, operator, [rule]):
+                if isinstance(answer, Offer):
+                    return answer
+    return None
