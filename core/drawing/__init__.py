@@ -1,0 +1,1 @@
+"""Positions, and the display list that window, SVG, PDF and tests share."""
