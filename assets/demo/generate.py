@@ -15,7 +15,6 @@ import os
 import shutil
 import tempfile
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass
 from itertools import pairwise
 from pathlib import Path
 from typing import Any, NamedTuple
@@ -106,8 +105,7 @@ def generate(folder: Path, scale: float = 1.0, seed: int = 1) -> None:
         shutil.rmtree(making, ignore_errors=True)
 
 
-@dataclass(frozen=True)
-class Plan:
+class Plan(NamedTuple):
     """How many of what, and who gets how much."""
 
     seed: int
@@ -436,8 +434,7 @@ def _one_of(rng: np.random.Generator, counts: Integers, group: Integers) -> Inte
 # Parcels and what happens to them -----------------------------------------------------------------------------------
 
 
-@dataclass(frozen=True)
-class Parcels:
+class Parcels(NamedTuple):
     """The parcels of one chunk. Times in microseconds since 1970; `depot` and `merchant` count from 1."""
 
     number: Integers
@@ -454,7 +451,8 @@ class Parcels:
     late: NDArray[np.bool_]
     delay: Reals  # days after the promise, 0 where on time
 
-    def __len__(self) -> int:
+    @property
+    def size(self) -> int:
         return len(self.number)
 
 
@@ -546,7 +544,7 @@ def _last(parcels: Parcels) -> Integers:
 
 def _write_scans(writer: Writer, plan: Plan, chunk: int, parcels: Parcels, first: int) -> int:
     rng = plan.stream(7, chunk)
-    size = len(parcels)
+    size = parcels.size
     counts = np.where(parcels.late, 8 + rng.poisson(3.2 + 1.7 * parcels.delay), 4 + rng.poisson(3, size))
     counts = np.where(rng.random(size) < np.where(parcels.late, 0.01, 0.005), 0, counts)  # labels nobody can read
     parcel, place = _events(counts)
@@ -581,7 +579,7 @@ def _write_scans(writer: Writer, plan: Plan, chunk: int, parcels: Parcels, first
 
 def _write_notices(writer: Writer, plan: Plan, chunk: int, parcels: Parcels, first: int) -> int:
     rng = plan.stream(8, chunk)
-    size = len(parcels)
+    size = parcels.size
     counts = np.where(parcels.late, 4 + rng.poisson(3 + 1.95 * parcels.delay), rng.poisson(1.6, size))
     counts = np.where(parcels.late & (rng.random(size) < 0.03), 0, counts)  # no address to write to
     parcel, place = _events(counts)
@@ -631,7 +629,7 @@ def _write_notices(writer: Writer, plan: Plan, chunk: int, parcels: Parcels, fir
 
 def _write_claims(writer: Writer, plan: Plan, chunk: int, parcels: Parcels, first: int) -> int:
     rng = plan.stream(9, chunk)
-    size = len(parcels)
+    size = parcels.size
     lost = parcels.open & (parcels.promised < SNAPSHOT - 14 * DAY)
     claimed = rng.random(size) < np.where(lost, 0.6, np.where(parcels.late, 0.25, 0.004))
     counts = np.where(claimed, 1 + (rng.random(size) < 0.06), 0)

@@ -1,0 +1,1 @@
+"""Data sets for tests, made when first asked for and kept under `build/`."""
