@@ -75,6 +75,23 @@ def test_size_of_the_small_scenario(engine: duckdb.DuckDBPyConnection) -> None:
     assert max(counts, key=lambda name: counts[name]) == "scans"
 
 
+def test_readme_gives_the_figures_and_the_queries(engine: duckdb.DuckDBPyConnection) -> None:
+    text = (demo.DEMO / "README.md").read_text(encoding="utf-8")
+    table = re.findall(r"^\| ([a-z_, ]+) \| ([\d, ]+) \|", text, re.MULTILINE)
+    said = {
+        name: int(count.replace(",", ""))
+        for names, counts in table
+        for name, count in zip(names.split(", "), counts.split(", "), strict=True)
+    }
+    assert said == {name: _value(engine, f"select count(*) from {name}") for name in RELATIONS}
+    listed = re.findall(r"^\| (\d\d-[a-z-]+)( a, b)? \|", text, re.MULTILINE)
+    assert [f"{name}{part}" for name, pair in listed for part in ((".a", ".b") if pair else ("",))] == list(QUERIES)
+    joined = f"parcels p join scans using (parcel_id) join notices using (parcel_id) where {LATE}"
+    rows = _value(engine, f"select count(*) from {joined}")
+    late = _value(engine, f"select count(*) from parcels where {LATE}")
+    assert f"({rows:,} rows for {late:,} late parcels)" in text
+
+
 # Planted facts --------------------------------------------------------------------------------------------------------
 
 
