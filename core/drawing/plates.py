@@ -12,7 +12,7 @@ from core.algebra.scalars import Ref
 from core.catalog.model import Catalog
 from core.drawing.display import ACCENT, INK, SOFT, WASH, Circle, DisplayList, Line, Shape, Text
 from core.drawing.metrics import cut, width
-from core.drawing.numbers import rows_text
+from core.size.numbers import rows_text
 from core.size import Size
 
 GAUGE = 124.0

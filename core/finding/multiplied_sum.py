@@ -1,0 +1,51 @@
+"""Sum over a fan-out: a value is added up once for each partner its row meets."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+
+from core.algebra.graph import attributes
+from core.algebra.notation import is_product, scalar_text
+from core.algebra.operators import Group, Join, JoinKind, Operator, Project, Select
+from core.algebra.scalars import refs
+from core.finding.model import Finding, View, condition_of, key_sides
+
+
+def find(view: View) -> Iterator[Finding]:
+    for operator in view.formulation.operators():
+        if not isinstance(operator, Group):
+            continue
+        for column in operator.aggregates:
+            call = column.aggregate
+            if call.name not in ("sum", "avg") or call.distinct:
+                continue
+            join = _multiplying(operator.input, frozenset(refs(call)), view)
+            if join is None:
+                continue
+            side = join.left if refs(call) <= set(attributes(join.left)) else join.right
+            factor = view.rows(join) / max(1.0, view.rows(side))
+            sentence = (
+                f"{scalar_text(call)} adds a value once for each row it meets on {condition_of(join)} "
+                f"({factor:.1f} times on average): the total is likely not what is meant"
+            )
+            yield Finding(
+                "sum over a fan-out", operator, sentence, view.rows(join), view.evidence(join), None,
+                "sum before joining, or join only what is unique",
+            )
+
+
+def _multiplying(operator: Operator, read: frozenset[object], view: View) -> Join | None:
+    """A join below that repeats the rows the summed value stands in."""
+    while isinstance(operator, (Select, Project)) or (isinstance(operator, Join) and operator.kind in (JoinKind.SEMI, JoinKind.ANTI)):
+        operator = operator.left if isinstance(operator, Join) else operator.input
+    if not isinstance(operator, Join) or operator.kind not in (JoinKind.INNER, JoinKind.LEFT) or not read:
+        return None
+    left, right = set(attributes(operator.left)), set(attributes(operator.right))
+    # A value looked up by its key is meant to be repeated; one that meets many of many is not.
+    many = not is_product(operator) and not any(key_sides(operator, view.facts))
+    side = operator.left if read <= left else operator.right if read <= right else None
+    if side is None:
+        return None
+    if many and view.rows(operator) > 1.2 * view.rows(side):
+        return operator
+    return _multiplying(side, read, view)
