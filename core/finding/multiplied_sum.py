@@ -19,7 +19,7 @@ def find(view: View) -> Iterator[Finding]:
             call = column.aggregate
             if call.name not in ("sum", "avg") or call.distinct:
                 continue
-            join = _multiplying(operator.input, frozenset(refs(call)), view)
+            join = _multiplying(operator.input, frozenset(refs(call)), operator, view)
             if join is None:
                 continue
             side = join.left if refs(call) <= set(attributes(join.left)) else join.right
@@ -34,18 +34,21 @@ def find(view: View) -> Iterator[Finding]:
             )
 
 
-def _multiplying(operator: Operator, read: frozenset[object], view: View) -> Join | None:
+def _multiplying(operator: Operator, read: frozenset[object], group: Group, view: View) -> Join | None:
     """A join below that repeats the rows the summed value stands in."""
     while isinstance(operator, (Select, Project)) or (isinstance(operator, Join) and operator.kind in (JoinKind.SEMI, JoinKind.ANTI)):
         operator = operator.left if isinstance(operator, Join) else operator.input
     if not isinstance(operator, Join) or operator.kind not in (JoinKind.INNER, JoinKind.LEFT) or not read:
         return None
     left, right = set(attributes(operator.left)), set(attributes(operator.right))
-    # A value looked up by its key is meant to be repeated; one that meets many of many is not.
-    many = not is_product(operator) and not any(key_sides(operator, view.facts))
     side = operator.left if read <= left else operator.right if read <= right else None
-    if side is None:
+    if side is None or is_product(operator):
         return None
-    if many and view.rows(operator) > 1.2 * view.rows(side):
+    keys = key_sides(operator, view.facts)
+    repeats = not keys[1] if side is operator.left else not keys[0]
+    # A price looked up for each parcel is meant to be repeated: the groups are then of parcels, not of prices. Where the
+    # value's own row decides its group, each repetition is one too many.
+    decides = set(group.keys) <= view.facts.determined(group.input, set(attributes(side)) & set(attributes(group.input)))
+    if repeats and decides and view.rows(operator) > 1.2 * view.rows(side):
         return operator
-    return _multiplying(side, read, view)
+    return _multiplying(side, read, group, view)

@@ -1,0 +1,1 @@
+"""The document: formulations, revisions, callouts, catalog; its history and its file."""
