@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Sequence
 from dataclasses import dataclass, field
 
-from core.drawing.display import ACCENT, INK, SOFT, Box, DisplayList, Line, Text
+from core.drawing.display import ACCENT, INK, PAPER, SOFT, Box, DisplayList, Line, Shape, Text
 from core.drawing.metrics import cut, width, wrapped
 
 CAUTION = (
@@ -100,6 +100,8 @@ def draw_page(columns: Sequence[Column], page: Page, least: tuple[float, float] 
     table = _Tables(page, wide - 2 * (_MARGIN + 14))
     high = max(least[1], bottom - top + table.height + 2 * (_MARGIN + 14) + 90)
     out = DisplayList(title=page.title, description=_described(columns, page))
+    # The paper reaches beyond the frame.
+    out.add(Shape(((0, 0), (wide, 0), (wide, high), (0, high)), PAPER))
     frame = (_MARGIN + 14, _MARGIN + 14, wide - _MARGIN - 14, high - _MARGIN - 14)
     _frame(out, wide, high, frame)
     out.extend(body, frame[0] + 28 - left, frame[1] + 22 - top)
@@ -180,7 +182,7 @@ class _Tables:
         return out
 
     def _legend(self, out: DisplayList, y: float) -> None:
-        from core.drawing.display import Circle, Shape
+        from core.drawing.display import Circle
 
         x = 16.0
         label = "gauge: decades of rows"

@@ -1,0 +1,1 @@
+"""The display list painted by Qt and written to files."""
