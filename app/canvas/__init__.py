@@ -1,0 +1,1 @@
+"""The canvas: one widget that paints the display list."""
