@@ -58,6 +58,7 @@ class Editor(QWidget):
         self.field = QPlainTextEdit()
         self.field.setFont(font("mono", 13))
         self.field.setTabStopDistance(28)
+        self.field.document().setDocumentMargin(10)
         self.field.setLineWrapMode(QPlainTextEdit.LineWrapMode.NoWrap)
         self.field.setTabChangesFocus(True)
         self.field.setAccessibleName("Text of the formulation")

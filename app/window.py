@@ -99,9 +99,7 @@ class Window(QMainWindow):
         self.addDockWidget(area, dock)
         across = area == Qt.DockWidgetArea.BottomDockWidgetArea
         self.resizeDocks([dock], [size], Qt.Orientation.Vertical if across else Qt.Orientation.Horizontal)
-        if not across:
-            empty = QWidget()
-            dock.setTitleBarWidget(empty)
+        dock.setTitleBarWidget(QWidget())
         return dock
 
     def _menus(self) -> None:

@@ -13,6 +13,7 @@ from core.drawing.palette import Palette
 # Fonts are laid out at whole pixel sizes and scaled: a size of 11.5 is drawn at 23 and halved.
 _SCALE = 2.0
 _LEAST_TEXT = 5.5
+_NEAR = 0.7
 
 
 def paint(painter: QPainter, display: DisplayList, palette: Palette, clip: QRectF | None = None, zoom: float = 1.0) -> None:
@@ -26,6 +27,8 @@ def paint(painter: QPainter, display: DisplayList, palette: Palette, clip: QRect
             if right < clip.left() - 2 or left > clip.right() + 2 or bottom < clip.top() - 2 or top > clip.bottom() + 2:
                 continue
         match item:
+            case Line(detail=True) if zoom < _NEAR:
+                pass
             case Line():
                 pen = QPen(colours[item.role], item.weight)
                 pen.setCapStyle(Qt.PenCapStyle.FlatCap)

@@ -36,6 +36,7 @@ class Below(QWidget):
         self.catalog = _tree("Catalog", ["relation or attribute", "type", "rows or distinct", "nulls", "least", "greatest", "evidence"])
         self.verdict_text = QTextBrowser()
         self.verdict_text.setFont(font("sans", 13))
+        self.verdict_text.document().setDocumentMargin(10)
         self.verdict_text.setAccessibleName("Verdict")
         for widget, name in (
             (self.findings, "Findings"),

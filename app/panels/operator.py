@@ -10,7 +10,7 @@ from PySide6.QtWidgets import QLabel, QListWidget, QListWidgetItem, QPushButton,
 from app.fonts import font
 from app.model import Workbench
 from core.algebra.functions import calls
-from core.algebra.graph import attributes, free
+from core.algebra.graph import attributes, free, scalars
 from core.algebra.notation import condition_text, name_of, sign
 from core.algebra.operators import Operator
 from core.derive.facts import Facts
@@ -34,6 +34,7 @@ class OperatorPanel(QWidget):
         self.text.setFont(font("sans", 13))
         self.text.setOpenLinks(False)
         self.text.setAccessibleName("The selected operator")
+        self.text.document().setDocumentMargin(10)
         self.text.anchorClicked.connect(self._clicked)
         self.list = QListWidget()
         self.list.setAccessibleName("Rewrites at this operator")
@@ -72,6 +73,7 @@ class OperatorPanel(QWidget):
         self.list.clear()
         self._answers, self._choices = [], []
         if operator is None or draft is None or draft.formulation is None:
+            self.caption.setText("Rewrites here")
             self.text.setHtml(self._welcome())
             self._explain()
             return
@@ -90,16 +92,21 @@ class OperatorPanel(QWidget):
 
     def _list_answers(self, operator: Operator) -> None:
         answers = self.bench.answers(operator)
-        answers.sort(key=lambda a: isinstance(a, Refusal))
         seen: dict[str, int] = {}
+        choices: dict[int, int] = {}
         for answer in answers:
             if isinstance(answer, Offer):
-                choice = seen.get(answer.rule.name, 0)
-                seen[answer.rule.name] = choice + 1
-                effect = self.bench.effect(answer)
+                choices[id(answer)] = seen.get(answer.rule.name, 0)
+                seen[answer.rule.name] = choices[id(answer)] + 1
+        effects = {id(a): self.bench.effect(a) for a in answers if isinstance(a, Offer)}
+        # What saves most stands first, then what changes nothing, then what costs, then what is refused.
+        answers.sort(key=lambda a: _rank(effects.get(id(a))))
+        for answer in answers:
+            choice = choices.get(id(answer), 0)
+            if isinstance(answer, Offer):
+                effect = effects[id(answer)]
                 text = f"{answer.rule.title}   {'' if effect == '=' else effect + ' rows in all'}\n{answer.what}"
             else:
-                choice = 0
                 text = f"{answer.rule.title}\nrefused: {answer.reason}"
             item = QListWidgetItem(text)
             if isinstance(answer, Refusal):
@@ -154,7 +161,7 @@ class OperatorPanel(QWidget):
         head = f"{sign(operator)} {name_of(operator)}".strip()
         parts = [f"<h3 style='margin-bottom:2px'>{escape(head)}</h3>"]
         parts.append(f"<p style='font-family:\"JetBrains Mono\"'>{escape(condition_text(operator))}</p>")
-        carried = sorted({c.name for c in calls(*_scalars(operator)) if c.form})
+        carried = sorted({c.name for c in calls(*scalars(operator)) if c.form})
         if carried:
             parts.append(self._soft(f"carried whole: {', '.join(carried)}"))
         if free(operator):
@@ -208,6 +215,15 @@ class OperatorPanel(QWidget):
         return f"<h4 style='margin-bottom:0'>Attributes</h4><p style='color:{soft}; margin-top:2px'>{escape(text)}</p><table cellspacing='0'>{rows}</table>"
 
 
+def _rank(effect: str | None) -> tuple[int, float]:
+    if effect is None:
+        return 3, 0.0
+    if effect == "=":
+        return 1, 0.0
+    factor = float(effect[2:].rstrip("kMGTPE"))
+    return (0, -factor) if effect.startswith("÷") else (2, factor)
+
+
 def _off(size: Size) -> str:
     assert size.measured is not None
     estimate, true = max(1.0, size.rows), max(1.0, float(size.measured))
@@ -217,7 +233,3 @@ def _off(size: Size) -> str:
     return f"{factor:.1f} times too {'high' if estimate > true else 'low'}"
 
 
-def _scalars(operator: Operator):  # type: ignore[no-untyped-def]
-    from core.algebra.graph import scalars
-
-    return scalars(operator)

@@ -22,6 +22,7 @@ class Line:
     weight: float = 1.2
     dash: tuple[float, ...] = ()
     owner: str = ""
+    detail: bool = False
 
 
 @dataclass(frozen=True, slots=True)

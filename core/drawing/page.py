@@ -71,12 +71,17 @@ def _dimension(out: DisplayList, dimension: Dimension) -> None:
         return
     a, b = out.boxes[dimension.left], out.boxes[dimension.right]
     start, end = a[2] + 34, b[0] - 14
-    y = (a[1] + a[3]) / 2 + 18
     obstacles = [box for owner, box in out.boxes.items() if owner not in (dimension.left, dimension.right)]
-    crossed = [box for box in obstacles if box[0] < end and box[2] > start and box[1] - 4 < y < box[3] + 4]
-    if crossed:
-        start = max(start, max((box[2] for box in crossed if box[2] < (start + end) / 2 + 200), default=start) + 14)
-    if end - start < 60:
+    places = [(box[1] + box[3]) / 2 + shift for box in (a, b) for shift in (18, 0, -18)]
+
+    def crossed(y: float) -> list[Box]:
+        return [box for box in obstacles if box[0] < end and box[2] > start and box[1] - 18 < y < box[3] + 8]
+
+    y = next((y for y in places if not crossed(y)), places[0])
+    # Where every height is blocked, the line ends before the first plate in its way.
+    end = min([end, *(box[0] - 14 for box in crossed(y) if box[0] > start)])
+    start = max([start, *(box[2] + 14 for box in crossed(y) if box[2] < end)])
+    if end - start < width(dimension.text, "sans-bold", 12.5):
         return
     for x in (start, end):
         out.add(Line(((x, y - 7), (x, y + 7)), ACCENT, 1.0))

@@ -149,7 +149,7 @@ def _relation(out: DisplayList, plate: Plate, left: float, top: float, role: str
         own = width(text, "mono", 11.5)
         out.add(Text(x, top + 19, text, "mono", 11.5, role, owner=plate.owner, detail=True))
         if key:
-            out.add(Line(((x, top + 22.5), (x + own, top + 22.5)), role, 0.9, owner=plate.owner))
+            out.add(Line(((x, top + 22.5), (x + own, top + 22.5)), role, 0.9, owner=plate.owner, detail=True))
         x += own
 
 

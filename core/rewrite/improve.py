@@ -22,6 +22,8 @@ from core.size import Size, size
 _IDLE = frozenset({"split-selection", "commute-join", "distinct-to-group", "group-to-distinct", "semi-join-to-join", "selection-out-of-join"})
 """Rules that only make room for others; the search does not take them on their own."""
 
+_TIDYING = frozenset({"count-distinct-to-count", "drop-distinct", "drop-sort", "union-to-union-all", "drop-identity-projection"})
+
 _SETTLING = 1e-6
 
 
@@ -86,7 +88,26 @@ def improve(
             progress(min(0.99, 1 - max(0.0, ends - time.monotonic()) / seconds), f"{len(chain)} rewrites")
     while chain and chain[-1].after >= chain[-1].before * (1 - _SETTLING):
         chain.pop()
-    return chain
+    return chain + _tidied(chain[-1].formulation if chain else formulation, cost, facts) if chain else chain
+
+
+def _tidied(current: Formulation, cost: float, facts: Facts) -> list[Revision]:
+    """What has become needless on the way: rewrites that save work which the total of rows does not show."""
+    found: list[Revision] = []
+    rules = [rule for rule in RULES if rule.name in _TIDYING]
+    while len(found) < 12:
+        context = Context(current, facts)
+        offer = next(
+            (a for op in current.operators() for a in attempts(context, op, rules) if isinstance(a, Offer)), None
+        )
+        if offer is None:
+            break
+        after = total_rows(offer.after, size(offer.after, facts.catalog, facts=facts))
+        if after > cost * (1 + _SETTLING):
+            break
+        found.append(Revision(offer, cost, after))
+        current, cost = offer.after, after
+    return found
 
 
 def _best_step(

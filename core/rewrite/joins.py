@@ -3,9 +3,9 @@
 from __future__ import annotations
 
 from core.algebra.functions import volatile
-from core.algebra.graph import attributes, dependent, scalars
+from core.algebra.graph import attributes, dependent, postorder, scalars
 from core.algebra.notation import scalar_text
-from core.algebra.operators import Join, JoinKind, Operator, Select
+from core.algebra.operators import Join, JoinKind, Operator, Relation, Select
 from core.algebra.scalars import (
     Attribute,
     IsNull,
@@ -169,18 +169,25 @@ def _unread(join: Join, context: Context, side: Operator) -> Check:
     )
 
 
+def _relations(operator: Operator) -> str:
+    """The relations a side reads, by name, for a sentence."""
+    names = [part.alias or part.name for part in postorder(operator) if isinstance(part, Relation)]
+    shown = [name for name in dict.fromkeys(names)]
+    return ", ".join(shown[:3]) + (", …" if len(shown) > 3 else "") if shown else "that side"
+
+
 def _to_semi_join(operator: Operator, context: Context) -> list[Attempt] | None:
     if not isinstance(operator, Join) or operator.kind is not JoinKind.INNER:
         return None
     right = Attempt(
         (_unread(operator, context, operator.right), _once(operator, context, "right")),
         lambda: Join(JoinKind.SEMI, operator.left, operator.right, operator.condition),
-        "only whether a partner exists on the right matters",
+        f"{_relations(operator.right)}: only whether a partner exists matters",
     )
     left = Attempt(
         (_unread(operator, context, operator.left), _once(operator, context, "left"), independent(operator)),
         lambda: Join(JoinKind.SEMI, operator.right, operator.left, operator.condition),
-        "only whether a partner exists on the left matters",
+        f"{_relations(operator.left)}: only whether a partner exists matters",
     )
     return [right, left]
 
@@ -296,25 +303,25 @@ RULES = (
     Rule("commute-join", "exchange the sides of a join", "R ⋈ S = S ⋈ R, R ⟗ S = S ⟗ R, R ⟕ S = S ⟖ R", OUTER, "join", _commute),
     Rule("associate-join", "join the right inputs first", "(R ⋈ S) ⋈ T = R ⋈ (S ⋈ T)", MOERKOTTE, "join", _associate),
     Rule(
-        "simplify-outer-join", "an outer join undone by a condition above",
+        "simplify-outer-join", "outer join to inner join",
         "σp(R ⟕ S) = σp(R ⋈ S) where p rejects NULLs of S; ⟗ to ⟕ likewise", OUTER, "join", _simplify_outer,
     ),
     Rule(
-        "join-to-semi-join", "a join of which only the existence of a partner matters",
+        "join-to-semi-join", "join to semi-join",
         "δ(πR(R ⋈ S)) = δ(πR(R ⋉ S)); πR(R ⋈ S) = R ⋉ S where S has at most one partner",
         "Bernstein, Chiu, JACM 28(1) 1981", "join", _to_semi_join,
     ),
     Rule(
-        "semi-join-to-join", "a semi-join against a key",
+        "semi-join-to-join", "semi-join to join",
         "R ⋉ S = πR(R ⋈ S) where S has at most one partner", "Galindo-Legaria, Joshi, SIGMOD 2001", "join", _from_semi_join,
     ),
     Rule(
-        "eliminate-join", "a join that adds and drops nothing",
+        "eliminate-join", "drop a join that adds nothing",
         "πR(R ⋈ S) = R along a foreign key; πR(R ⟕ S) = R where S has at most one partner",
         "Chakravarthy, Grant, Minker, TODS 15(2) 1990", "join", _eliminate,
     ),
     Rule(
-        "null-test-to-anti-join", "an outer join with a test for NULL",
+        "null-test-to-anti-join", "outer join with a NULL test to anti-join",
         "πR(σs.k is null(R ⟕ S)) = R ▷ S where k is never NULL in S", OUTER, "join", _null_test,
     ),
 )  # fmt: skip
