@@ -108,7 +108,8 @@ def _with_steps(with_: exp.Expression, outer_env: Environment, outer: Block | No
         else:
             result = _named(read_query(cte.this, environment, outer, reading), columns, cte, reading)
         reading.names.setdefault(result.plan, name)
-        environment.steps[name.lower()] = Step(name, result, reading.step_uses.get(name.lower(), 0))
+        uses = reading.step_uses.get(name.lower(), 0) - _references(cte.this, name)
+        environment.steps[name.lower()] = Step(name, result, uses)
     return environment
 
 
@@ -120,8 +121,13 @@ def _named(result: Result, columns: list[str], node: exp.Expression, reading: Re
     return Result(result.plan, tuple(renamed))
 
 
+def _references(node: exp.Expression, name: str) -> int:
+    """How often a query reads a relation of this name."""
+    return sum(1 for t in node.find_all(exp.Table) if t.name.lower() == name.lower() and not t.args.get("db"))
+
+
 def _refers_to(node: exp.Expression, name: str) -> bool:
-    return any(table.name.lower() == name.lower() and not table.args.get("db") for table in node.find_all(exp.Table))
+    return _references(node, name) > 0
 
 
 def _fixpoint(
@@ -316,6 +322,8 @@ class _Item:
 def _select(node: exp.Select, environment: Environment, outer: Block | None, reading: Reading) -> Result:
     if node.args.get("kind"):
         raise reading.refuse(f"SELECT AS {node.args['kind']}", node)
+    if not node.expressions:
+        raise reading.refuse("nothing is selected", node, help="name the columns after SELECT")
     block = Block(reading, environment, Scope(), NOTHING, outer)
     read_from(node, block)
     block.select_aliases = {

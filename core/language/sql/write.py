@@ -7,9 +7,9 @@ from collections.abc import Mapping, Sequence
 from sqlglot import exp
 
 from core.algebra.formulation import Formulation
-from core.algebra.graph import attributes, postorder
+from core.algebra.graph import attributes, postorder, scalars
 from core.algebra.operators import Operator
-from core.algebra.scalars import Attribute, Ref
+from core.algebra.scalars import Attribute, Ref, walk
 from core.language.sql.blocks import Block, Query, SetQuery, derived
 from core.language.sql.depth import deep
 from core.language.sql.gather import Gathering, WriteError, gather, unique_names
@@ -61,7 +61,9 @@ def _written(
             node.set("with_", with_)
         return node.sql(dialect=dialect, pretty=pretty, normalize_functions="lower" if not pretty else "upper")
 
-    return deep(write, 12 * len(postorder(root)))
+    operators = postorder(root)
+    largest = max((sum(1 for _ in walk(*scalars(operator))) for operator in operators), default=0)
+    return deep(write, max(12 * len(operators), largest))
 
 
 def _outermost(query: Query, columns: Sequence[tuple[Attribute, str]]) -> exp.Query:
