@@ -125,7 +125,8 @@ class Canvas(QWidget):
         painter.scale(self.zoom, self.zoom)
         painter.translate(-self.origin)
         area = QRectF(self.to_sheet(QPointF(0, 0)), self.to_sheet(QPointF(self.width(), self.height())))
-        paint(painter, self.drawn.display, self.palette_roles, area, self.zoom)
+        # The print view is a page seen from further away or nearer: nothing is left out of it.
+        paint(painter, self.drawn.display, self.palette_roles, area, 1.0 if self.print_view else self.zoom)
         painter.end()
 
     def resizeEvent(self, event: object) -> None:

@@ -24,9 +24,10 @@ def find(view: View) -> Iterator[Finding]:
                 continue
             side = join.left if refs(call) <= set(attributes(join.left)) else join.right
             factor = view.rows(join) / max(1.0, view.rows(side))
+            often = f" ({factor:.1f} times on average)" if factor > 1.05 else ""
             sentence = (
-                f"{scalar_text(call)} adds a value once for each row it meets on {condition_of(join)} "
-                f"({factor:.1f} times on average): the total is likely not what is meant"
+                f"{scalar_text(call)} adds a value once for each row it meets on {condition_of(join)}{often}: "
+                "where there are several, the total is not what is meant"
             )
             yield Finding(
                 "sum over a fan-out", operator, sentence, view.rows(join), view.evidence(join), None,
@@ -49,6 +50,6 @@ def _multiplying(operator: Operator, read: frozenset[object], group: Group, view
     # A price looked up for each parcel is meant to be repeated: the groups are then of parcels, not of prices. Where the
     # value's own row decides its group, each repetition is one too many.
     decides = set(group.keys) <= view.facts.determined(group.input, set(attributes(side)) & set(attributes(group.input)))
-    if repeats and decides and view.rows(operator) > 1.2 * view.rows(side):
+    if repeats and decides:
         return operator
     return _multiplying(side, read, group, view)

@@ -43,7 +43,8 @@ class Revision:
 def total_rows(formulation: Formulation, sizes: Mapping[Operator, Size]) -> float:
     """Rows out of all operators but the base relations (C_out: Cluet, Moerkotte, ICDT 1995).
 
-    What runs once for each outer row counts as often. Measured counts are used where there are any.
+    What runs once for each outer row counts as often, base relations included: they are read again each time. Measured
+    counts are used where there are any.
     """
     times: dict[Operator, float] = {}
     for operator in reversed(formulation.operators()):
@@ -56,7 +57,7 @@ def total_rows(formulation: Formulation, sizes: Mapping[Operator, Size]) -> floa
     return sum(
         sizes[operator].best * times[operator]
         for operator in formulation.operators()
-        if not isinstance(operator, Relation)
+        if not isinstance(operator, Relation) or times[operator] > 1
     )
 
 
