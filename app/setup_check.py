@@ -14,16 +14,20 @@ import os
 import shutil
 import subprocess
 import sys
+from collections.abc import Iterable
 from pathlib import Path
 
-# Library, and the package that has it with apt, dnf, pacman and zypper.
+# Library, and the package that has it, in the order of MANAGERS. Without these Qt cannot even be imported.
 LIBRARIES = {
-    "libGL.so.1": ("libgl1", "mesa-libGL", "libglvnd", "Mesa-libGL1"),
-    "libEGL.so.1": ("libegl1", "mesa-libEGL", "libglvnd", "Mesa-libEGL1"),
+    "libGL.so.1": ("libgl1", "libglvnd-glx", "libglvnd", "libglvnd"),
+    "libEGL.so.1": ("libegl1", "libglvnd-egl", "libglvnd", "libglvnd"),
     "libxkbcommon.so.0": ("libxkbcommon0", "libxkbcommon", "libxkbcommon", "libxkbcommon0"),
     "libfontconfig.so.1": ("libfontconfig1", "fontconfig", "fontconfig", "fontconfig"),
     "libdbus-1.so.3": ("libdbus-1-3", "dbus-libs", "dbus", "libdbus-1-3"),
     "libglib-2.0.so.0": ("libglib2.0-0", "glib2", "glib2", "libglib-2_0-0"),
+}
+# Without these it cannot open a window on X11; drawing to files does without them.
+WINDOW_LIBRARIES = {
     "libxcb-cursor.so.0": ("libxcb-cursor0", "xcb-util-cursor", "xcb-util-cursor", "libxcb-cursor0"),
     "libxkbcommon-x11.so.0": ("libxkbcommon-x11-0", "libxkbcommon-x11", "libxkbcommon-x11", "libxkbcommon-x11-0"),
     "libxcb-icccm.so.4": ("libxcb-icccm4", "xcb-util-wm", "xcb-util-wm", "libxcb-icccm4"),
@@ -33,12 +37,14 @@ LIBRARIES = {
 MANAGERS = {
     "apt-get": ["apt-get", "install", "-y", "-qq", "--no-install-recommends"],
     "dnf": ["dnf", "install", "-y", "-q"],
-    "pacman": ["pacman", "-S", "--noconfirm", "--needed"],
+    "pacman": ["pacman", "-Sy", "--noconfirm", "--needed"],
     "zypper": ["zypper", "--non-interactive", "install"],
 }
+SCREEN = ("xvfb", "xorg-x11-server-Xvfb", "xorg-server-xvfb", "xorg-x11-server-Xvfb")
 
 
 def loads(library: str) -> bool:
+    """Whether the dynamic linker finds the library. Asking the linker itself sees what Qt will see."""
     try:
         ctypes.CDLL(library)
     except OSError:
@@ -47,7 +53,21 @@ def loads(library: str) -> bool:
 
 
 def manager() -> str | None:
+    """The system's package manager, of those that are known here."""
     return next((name for name in MANAGERS if shutil.which(name)), None)
+
+
+def packages_of(names: Iterable[tuple[str, ...]]) -> list[str]:
+    """What the packages are called by this system's manager; Debian's names where the manager is not known."""
+    name = manager()
+    column = list(MANAGERS).index(name) if name else 0
+    return sorted({each[column] for each in names})
+
+
+def command_for(packages: list[str]) -> str:
+    """What a person would type to install them."""
+    command = [part for part in MANAGERS[manager() or "apt-get"] if part not in ("-qq", "-q", "-y", "--noconfirm")]
+    return " ".join(["sudo", *command, *packages])
 
 
 def allowed() -> list[str] | None:
@@ -60,61 +80,81 @@ def allowed() -> list[str] | None:
 
 
 def install(packages: list[str]) -> bool:
-    """Installs system packages where it may; says whether it did."""
+    """Installs system packages where it may; says whether it did. What goes wrong is told by the manager itself."""
     name, prefix = manager(), allowed()
     if name is None or prefix is None:
         return False
-    environment = {**os.environ, "DEBIAN_FRONTEND": "noninteractive"}
+    print("Installing system packages:", " ".join(packages), flush=True)
+    prefix = [*prefix, "env", "DEBIAN_FRONTEND=noninteractive"]  # sudo would not pass it on
     if name == "apt-get":
-        subprocess.run([*prefix, "apt-get", "update", "-qq"], env=environment, stdout=subprocess.DEVNULL)
+        subprocess.run([*prefix, "apt-get", "update", "-qq"], stdin=subprocess.DEVNULL, stdout=subprocess.DEVNULL)
     command = [*prefix, *MANAGERS[name], *packages]
-    return subprocess.run(command, env=environment, stdout=subprocess.DEVNULL).returncode == 0
+    return subprocess.run(command, stdin=subprocess.DEVNULL, stdout=subprocess.DEVNULL).returncode == 0
 
 
 def make_libraries() -> int:
+    """Qt's libraries: 0 where all that is needed is there, 1 where the user has to ask for some."""
     if not sys.platform.startswith("linux"):
         return 0
-    missing = [library for library in LIBRARIES if not loads(library)]
+    known = LIBRARIES | WINDOW_LIBRARIES
+    missing = [library for library in known if not loads(library)]
     if not missing:
         return 0
-    name = manager()
-    column = list(MANAGERS).index(name) if name in MANAGERS else 0
-    packages = sorted({LIBRARIES[library][column] for library in missing})
-    print("Qt needs system libraries that are missing:", ", ".join(missing))
-    if name is not None and install(packages) and all(loads(library) for library in missing):
-        print("Installed:", " ".join(packages))
+    packages = packages_of(known[library] for library in missing)
+    install(packages)
+    missing = [library for library in known if not loads(library)]
+    if not missing:
         return 0
-    command = " ".join([*(MANAGERS[name] if name else ["apt-get", "install"]), *packages])
-    print(f"They could not be installed from here. Ask for them with:\n    {command}", file=sys.stderr)
-    return 1
+    command = command_for(packages_of(known[library] for library in missing))
+    print(f"Qt misses system libraries: {', '.join(missing)}.", file=sys.stderr)
+    print(f"They could not be installed from here. Install them with:\n    {command}", file=sys.stderr)
+    needed = [library for library in missing if library in LIBRARIES or os.environ.get("DISPLAY")]
+    if not needed:
+        print("Until then no window can be opened on X11; drawing to files works.", file=sys.stderr)
+    return 1 if needed else 0
 
 
 def make_screen() -> int:
-    """A virtual screen lets one test run the window as on X11. Without it that test says so and is left out."""
+    """A virtual screen lets tests run the window as on X11. Without it they say so and are left out: never an error."""
     if sys.platform.startswith("linux") and not shutil.which("Xvfb"):
-        install(["xvfb"] if manager() == "apt-get" else ["xorg-x11-server-Xvfb"])
+        packages = packages_of([SCREEN])
+        install(packages)
+        if not shutil.which("Xvfb"):
+            print(f"Without Xvfb the tests on an X11 screen are left out. To run them: {command_for(packages)}")
     return 0
 
 
-def make_environment(folder: str) -> int:
-    if (Path(folder) / "bin" / "python").exists():
+def make_environment(folder: Path) -> int:
+    """A virtual environment with pip. One that is whole stays as it is; a broken or half-made one is made anew."""
+    if sys.version_info < (3, 11):  # noqa: UP036  (this file runs before the version is settled)
+        print(f"Planimeter needs Python 3.11 or newer, this is {sys.version.split()[0]}.", file=sys.stderr)
+        return 1
+    if is_whole(folder):
         return 0
     try:
-        import ensurepip  # noqa: F401
-        import venv
+        import ensurepip  # noqa: F401  (some systems leave it out of Python and pack it apart)
     except ImportError:
-        package = f"python3.{sys.version_info.minor}-venv"
+        package = f"python3.{sys.version_info.minor}-venv" if manager() == "apt-get" else "python3-pip"
         if not install([package]):
-            print(f"This Python cannot make virtual environments: install {package}.", file=sys.stderr)
+            print(f"This Python cannot make virtual environments: {command_for([package])}", file=sys.stderr)
             return 1
-        return subprocess.run([sys.executable, "-m", "venv", folder]).returncode
-    venv.create(folder, with_pip=True)
-    return 0
+    made = subprocess.run([sys.executable, "-m", "venv", "--clear", str(folder)])
+    return made.returncode
+
+
+def is_whole(folder: Path) -> bool:
+    """Whether there is an environment whose Python is fit and has pip."""
+    python = folder / "bin" / "python"
+    if not python.exists():
+        return False
+    check = "import sys, pip; sys.exit(sys.version_info < (3, 11))"
+    return subprocess.run([python, "-c", check], capture_output=True).returncode == 0
 
 
 def main(arguments: list[str]) -> int:
+    """Carries out one request; the exit code tells whether what it is for can go on."""
     if arguments[:1] == ["venv"] and len(arguments) == 2:
-        return make_environment(arguments[1])
+        return make_environment(Path(arguments[1]))
     if arguments == ["libraries"]:
         return make_libraries()
     if arguments == ["screen"]:
