@@ -52,8 +52,9 @@ class Workbench(QObject):
         self.active = "A"
         self.selection: Operator | None = None
         self.beside = True
-        self._sizes: dict[tuple[int, int, int], dict[Operator, Size]] = {}
-        self._findings: dict[tuple[int, int], list[Finding]] = {}
+        # Kept by identity. The values hold what the keys are identities of, so that none is given to another object.
+        self._sizes: dict[tuple[Formulation, int, int], tuple[object, dict[Operator, Size]]] = {}
+        self._findings: dict[tuple[Formulation, int], tuple[object, list[Finding]]] = {}
 
     # --- reading -----------------------------------------------------------------------------------------------------
 
@@ -75,24 +76,25 @@ class Workbench(QObject):
         return drafts if self.beside else [d for d in drafts if d.letter == self.active]
 
     def sizes(self, formulation: Formulation) -> dict[Operator, Size]:
-        key = (id(formulation), id(self.sheet.catalog), id(self.sheet.measured))
+        catalog, measured = self.sheet.catalog, self.sheet.measured
+        key = (formulation, id(catalog), id(measured))
         if key not in self._sizes:
             if len(self._sizes) > 60:
                 self._sizes.clear()
-            self._sizes[key] = size(formulation, self.sheet.catalog, self.sheet.measured)
-        return self._sizes[key]
+            self._sizes[key] = ((catalog, measured), size(formulation, catalog, measured))
+        return self._sizes[key][1]
 
     def findings(self, draft: Draft) -> list[Finding]:
         formulation = draft.formulation
         if formulation is None:
             return []
         sizes = self.sizes(formulation)
-        key = (id(formulation), id(sizes))
+        key = (formulation, id(sizes))
         if key not in self._findings:
             if len(self._findings) > 60:
                 self._findings.clear()
-            self._findings[key] = findings(formulation, self.sheet.catalog, sizes)
-        return self._findings[key]
+            self._findings[key] = (sizes, findings(formulation, self.sheet.catalog, sizes))
+        return self._findings[key][1]
 
     def answers(self, operator: Operator) -> list[Offer | Refusal]:
         """The rewrites offered and refused at an operator of the active draft."""

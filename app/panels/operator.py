@@ -160,7 +160,7 @@ class OperatorPanel(QWidget):
     def _describe(self, operator: Operator, size: Size | None) -> str:
         head = f"{sign(operator)} {name_of(operator)}".strip()
         parts = [f"<h3 style='margin-bottom:2px'>{escape(head)}</h3>"]
-        parts.append(f"<p style='font-family:\"JetBrains Mono\"'>{escape(condition_text(operator))}</p>")
+        parts.append(f"<p style='font-family:\"Planimeter Mono\"'>{escape(condition_text(operator))}</p>")
         carried = sorted({c.name for c in calls(*scalars(operator)) if c.form})
         if carried:
             parts.append(self._soft(f"carried whole: {', '.join(carried)}"))
@@ -189,7 +189,7 @@ class OperatorPanel(QWidget):
             for a, b, c in rows
         )
         lines = "".join(
-            f"<tr><td style='padding-right:8px'>{escape(line.text)}<br><span style='font-family:\"JetBrains Mono\"; color:{soft}'>"
+            f"<tr><td style='padding-right:8px'>{escape(line.text)}<br><span style='font-family:\"Planimeter Mono\"; color:{soft}'>"
             f"{escape(line.formula)} = {line.value:.6g}</span><br><span style='color:{soft}'>{escape(line.evidence.word)}"
             f"{': ' + escape(line.source) if line.source else ''}</span></td></tr>"
             for line in size.derivation

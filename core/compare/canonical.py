@@ -38,10 +38,13 @@ from core.algebra.operators import (
 )
 from core.algebra.scalars import (
     TRUE,
+    And,
     Attribute,
     Comparison,
     ComparisonOperator,
     Node,
+    Not,
+    Or,
     Ref,
     Scalar,
     conjuncts,
@@ -261,7 +264,7 @@ def _cluster(operator: Operator, outer: Label) -> Cluster:
             raise NoForm("a function differs from call to call")
         match current:
             case Select(input=below, condition=condition):
-                found.conditions.extend(conjuncts(condition))
+                found.conditions.extend(_terms(condition))
                 pending.append(below)
             case Project(input=below, columns=columns):
                 for column in columns:
@@ -271,7 +274,7 @@ def _cluster(operator: Operator, outer: Label) -> Cluster:
             case Sort(input=below):
                 pending.append(below)
             case Join(kind=JoinKind.INNER, left=left, right=right, condition=condition):
-                found.conditions.extend(conjuncts(condition))
+                found.conditions.extend(_terms(condition))
                 pending.extend((left, right))
             case Join(kind=JoinKind.SEMI | JoinKind.ANTI, left=left, right=right, condition=condition):
                 found.filters.append(Filter(current.kind, right, condition))
@@ -291,6 +294,21 @@ def _cluster(operator: Operator, outer: Label) -> Cluster:
     produced = [a for leaf in found.leaves for a in leaf.labels]
     if len(set(produced)) != len(produced):
         raise NoForm("one shared part is read twice without a renaming")
+    return found
+
+
+def _terms(condition: Scalar) -> list[Scalar]:
+    """The terms of a conjunction, a negated disjunction seen as one (De Morgan holds in three-valued logic)."""
+    found: list[Scalar] = []
+    pending = list(reversed(conjuncts(condition)))
+    while pending:
+        term = pending.pop()
+        if isinstance(term, Not) and isinstance(term.term, Or):
+            pending.extend(Not(part) for part in reversed(term.term.terms))
+        elif isinstance(term, And):
+            pending.extend(reversed(term.terms))
+        else:
+            found.append(term)
     return found
 
 

@@ -25,7 +25,7 @@ def rows_text(value: float) -> str:
 
 def _three(value: float) -> str:
     if value >= 1000:
-        return f"{value:.3g}"
+        return f"{value:,.0f}"
     digits = 0 if value >= 99.95 else 1 if value >= 9.995 else 2
     text = f"{value:.{digits}f}"
     return text.rstrip("0").rstrip(".") if "." in text else text
