@@ -171,8 +171,8 @@ def _unread(join: Join, context: Context, side: Operator) -> Check:
 
 def _relations(operator: Operator) -> str:
     """The relations a side reads, by name, for a sentence."""
-    names = [part.alias or part.name for part in postorder(operator) if isinstance(part, Relation)]
-    shown = [name for name in dict.fromkeys(names)]
+    names = [part.name.rpartition(".")[2] for part in postorder(operator) if isinstance(part, Relation)]
+    shown = list(dict.fromkeys(names))
     return ", ".join(shown[:3]) + (", …" if len(shown) > 3 else "") if shown else "that side"
 
 
