@@ -12,9 +12,9 @@ from core.algebra.graph import inputs, postorder
 from core.algebra.operators import Operator
 from core.catalog.model import Catalog
 from core.derive.facts import Facts
-from core.size.estimate import Estimate, estimate, width_of
+from core.size.estimate import estimate, width_of
 from core.size.guarantee import Bounds, bounds
-from core.size.model import Line, Size
+from core.size.model import Estimate, Line, Size
 
 __all__ = ["Line", "Size", "size"]
 

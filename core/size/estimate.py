@@ -3,9 +3,9 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass, replace
+from dataclasses import replace
 
-from core.algebra.graph import attributes, dependent, inputs
+from core.algebra.graph import attributes
 from core.algebra.notation import name_of
 from core.algebra.operators import (
     Distinct,
@@ -13,7 +13,6 @@ from core.algebra.operators import (
     Fixpoint,
     Group,
     Join,
-    JoinKind,
     Limit,
     Nest,
     Operator,
@@ -31,36 +30,23 @@ from core.algebra.operators import (
 )
 from core.algebra.scalars import (
     Attribute,
-    Comparison,
-    ComparisonOperator,
     Literal,
     Ref,
     Scalar,
-    conjunction,
-    conjuncts,
 )
 from core.algebra.types import assumed_bytes
 from core.algebra.typing import type_of
-from core.catalog.model import Catalog, Evidence, Value
-from core.size.distribution import Distribution, base_distribution, groups, remaining_distinct, thinned
-from core.size.guarantee import equalities
-from core.size.model import Line
-from core.size.selectivity import RANGE_GUESS, Share, figure, share_of
+from core.catalog.model import Catalog, Evidence
+from core.size.distribution import Distribution, Origin, base_distribution, groups, thinned
+from core.size.joins import join
+from core.size.model import Estimate, Line, figure
+from core.size.restrict import restricted
+from core.size.selectivity import RANGE_GUESS, share_of
 
 ASSUMED_ROWS = 1000.0
 """Rows of a relation of which nothing is known."""
 
 Spread = dict[Attribute, Distribution]
-
-
-@dataclass(frozen=True, slots=True)
-class Estimate:
-    """Rows, the spread of each attribute, and the lines that led there."""
-
-    rows: float
-    spread: Mapping[Attribute, Distribution]
-    evidence: Evidence
-    lines: tuple[Line, ...] = ()
 
 
 def estimate(operator: Operator, below: list[Estimate], catalog: Catalog, known: Mapping[Operator, Estimate]) -> Estimate:
@@ -78,11 +64,11 @@ def estimate(operator: Operator, below: list[Estimate], catalog: Catalog, known:
             line = Line(f"rows of a {name_of(operator)}: nothing is known", figure(ASSUMED_ROWS), ASSUMED_ROWS, Evidence.ASSUMED)
             return Estimate(ASSUMED_ROWS, _fresh_spread(operator, ASSUMED_ROWS), Evidence.ASSUMED, (line,))
         case Select(condition=condition):
-            return _selected(below[0], share_of(condition, below[0].spread), "rows in")
+            return _selected(below[0], condition)
         case Project():
             return _project(operator, below[0])
         case Join():
-            return _join(operator, below[0], below[1], known)
+            return join(operator, below[0], below[1], known)
         case SetOperation():
             return _set_operation(operator, below)
         case Distinct():
@@ -130,15 +116,19 @@ def _relation(operator: Relation, catalog: Catalog) -> Estimate:
     rows = float(facts.rows)
     when = f", {facts.as_of.isoformat()}" if facts.as_of is not None else ""
     line = Line(f"rows of {operator.name}", figure(rows), rows, facts.rows_evidence, f"{facts.source}{when}")
-    spread = {a: base_distribution(facts.attribute(a.name), a.type, rows) for a in operator.attributes}
+    spread = {
+        a: replace(base_distribution(facts.attribute(a.name), a.type, rows), origin=Origin(operator, a.name, facts))
+        for a in operator.attributes
+    }
     return Estimate(rows, spread, facts.rows_evidence, (line,))
 
 
-def _selected(below: Estimate, share: Share, text: str) -> Estimate:
+def _selected(below: Estimate, condition: Scalar) -> Estimate:
+    share = share_of(condition, below.spread)
     rows = below.rows * share.value
     evidence = min(below.evidence, share.evidence)
-    total = Line(f"{text} × share kept", f"{figure(below.rows)} × {figure(share.value)}", rows, evidence)
-    spread = {a: thinned(d, below.rows, share.value) for a, d in below.spread.items()}
+    total = Line("rows in × share kept", f"{figure(below.rows)} × {figure(share.value)}", rows, evidence)
+    spread = restricted(below.spread, condition, below.rows, share.value)
     return Estimate(rows, spread, evidence, (*share.lines, total))
 
 
@@ -163,251 +153,6 @@ def _refs(value: object) -> frozenset[Attribute]:
     from core.algebra.scalars import Node, refs
 
     return refs(value) if isinstance(value, Node) else frozenset()
-
-
-# --- joins ---------------------------------------------------------------------------------------------------------
-
-
-def pair_share(left: Distribution, right: Distribution) -> float:
-    """The share of the product in which two attributes are equal.
-
-    Heavy hitters meet heavy hitters exactly; the rest by containment of value sets: 1 / max(distinct).
-    """
-    both = 0.0
-    right_heavy = list(right.heavy)
-    met_left = met_right = 0.0
-    from core.size.values import same_value
-
-    for value, share in left.heavy:
-        partner = next((s for v, s in right_heavy if same_value(v, value)), None)
-        if partner is not None:
-            both += share * partner
-            met_left += share
-            met_right += partner
-    rest_left, rest_right = 1 - left.null_share - met_left, 1 - right.null_share - met_right
-    matched = sum(1 for v, _ in left.heavy if any(same_value(v, w) for w, _ in right_heavy))
-    most = max(left.distinct, right.distinct) - matched
-    if most >= 0.5 and rest_left > 0 and rest_right > 0:
-        both += rest_left * rest_right / max(1.0, most) * _overlap(left, right)
-    return min(1.0, both)
-
-
-def _overlap(left: Distribution, right: Distribution) -> float:
-    """How much of the side with fewer values lies within the other's range: 1 unless the ranges are known to part."""
-    if None in (left.low, left.high, right.low, right.high):
-        return 1.0
-    assert left.low is not None and left.high is not None and right.low is not None and right.high is not None
-    if left.high < right.low or right.high < left.low:
-        return 0.0
-    return 1.0
-
-
-def _equal_share(operator: Join, left: Estimate, right: Estimate) -> tuple[Share | None, list[tuple[Attribute, Attribute]]]:
-    pairs = equalities(operator.condition, set(attributes(operator.left)), set(attributes(operator.right)))
-    if not pairs:
-        return None, pairs
-    lines, value, evidence = [], 1.0, Evidence.MEASURED
-    for mine, theirs in pairs:
-        a, b = left.spread[mine], right.spread[theirs]
-        share = pair_share(a, b)
-        level = min(a.evidence, b.evidence)
-        evidence = min(evidence, level)
-        value *= share
-        simple = not a.heavy or not b.heavy
-        present = (1 - a.null_share) * (1 - b.null_share)
-        formula = f"{figure(present)} ÷ {figure(max(1.0, a.distinct, b.distinct))}" if simple else figure(share)
-        if simple and abs(present / max(1.0, a.distinct, b.distinct) - share) > 1e-9 * max(share, 1e-300):
-            formula = figure(share)
-        method = "containment of value sets" if simple else "heavy hitters met one by one, the rest by containment"
-        lines.append(Line(f"share of pairs with {mine.name} = {theirs.name}", formula, share, level, method))
-    if len(pairs) > 1:
-        floor = 1 / max(1.0, left.rows, right.rows)
-        if value < floor:
-            # Several equalities are mostly one composite key: independence would make almost nothing of it.
-            text = "several equalities together: no rarer than one partner a row"
-            lines.append(Line(text, f"1 ÷ {figure(max(1.0, left.rows, right.rows))}", floor, evidence))
-            value = floor
-        else:
-            formula = " × ".join(figure(line.value) for line in lines)
-            lines.append(Line("the equalities together, taken as independent", formula, value, evidence))
-    return Share(value, tuple(lines), evidence), pairs
-
-
-def _join(operator: Join, left: Estimate, right: Estimate, known: Mapping[Operator, Estimate]) -> Estimate:
-    spread: Spread = {**left.spread, **right.spread}
-    equal, pairs = _equal_share(operator, left, right)
-    equated = {frozenset(pair) for pair in pairs}
-    others = [t for t in conjuncts(operator.condition) if not _is_pair(t, equated)]
-    rest = share_of(conjunction(others), spread) if others else None
-    shares = [share for share in (equal, rest) if share is not None]
-    value, evidence = 1.0, min(left.evidence, right.evidence)
-    for share in shares:
-        value *= share.value
-        evidence = min(evidence, share.evidence)
-    lines = tuple(line for share in shares for line in share.lines)
-    kind = operator.kind
-    if kind in (JoinKind.SEMI, JoinKind.ANTI, JoinKind.MARK, JoinKind.SINGLE):
-        return _half_join(operator, left, right, pairs, value, evidence, lines, known)
-    product = left.rows * right.rows
-    formula = " × ".join([figure(left.rows), figure(right.rows), *(figure(share.value) for share in shares)])
-    text = "left rows × right rows" + (" × share of pairs kept" if shares else "")
-    rows = product * value
-    lines = (*lines, Line(text, formula, rows, evidence))
-    found = Estimate(rows, _joined_spread(spread, pairs, left, right, rows), evidence, lines)
-    if kind is JoinKind.INNER:
-        return found
-    return _outer(kind, found, left, right, pairs)
-
-
-def _is_pair(term: object, equated: set[frozenset[Attribute]]) -> bool:
-    return (
-        isinstance(term, Comparison)
-        and term.operator is ComparisonOperator.EQUAL
-        and isinstance(term.left, Ref)
-        and isinstance(term.right, Ref)
-        and frozenset({term.left.attribute, term.right.attribute}) in equated
-    )
-
-
-def _joined_spread(
-    spread: Spread, pairs: list[tuple[Attribute, Attribute]], left: Estimate, right: Estimate, rows: float
-) -> Spread:
-    """Distinct counts after a join: of the join attributes the smaller side's, of the others no more than rows."""
-    found = {a: replace(d, distinct=max(min(d.distinct, rows), min(1.0, rows))) for a, d in spread.items()}
-    for mine, theirs in pairs:
-        a, b = left.spread[mine], right.spread[theirs]
-        fewer = min(found[mine].distinct, found[theirs].distinct)
-        heavy = _met(a, b)
-        for attribute, own in ((mine, a), (theirs, b)):
-            found[attribute] = replace(own, distinct=fewer, null_share=0.0, heavy=heavy)
-    return found
-
-
-def _met(left: Distribution, right: Distribution) -> tuple[tuple[Value, float], ...]:
-    """Heavy hitters of the joined attribute: shares multiply, and are taken of what is left."""
-    from core.size.values import same_value
-
-    total = pair_share(left, right)
-    if total <= 0:
-        return ()
-    found = []
-    for value, share in left.heavy:
-        partner = next((s for v, s in right.heavy if same_value(v, value)), None)
-        if partner is not None:
-            found.append((value, share * partner / total))
-        elif right.rest_distinct >= 0.5:
-            found.append((value, share * right.rest_share / max(1.0, right.rest_distinct) / total))
-    scale = max(1.0, sum(share for _, share in found))
-    return tuple((value, share / scale) for value, share in found)
-
-
-def _matching(left: Estimate, right: Estimate, pairs: list[tuple[Attribute, Attribute]], share: float) -> tuple[float, str, str]:
-    """The share of left rows that find a partner, with its formula and method."""
-    if pairs:
-        best, formula = 1.0, "1"
-        for mine, theirs in pairs:
-            a, b = left.spread[mine], right.spread[theirs]
-            have = min(1.0, b.distinct / max(1.0, a.distinct)) * (1 - a.null_share)
-            if have <= best:
-                best = have
-                formula = f"min(1, {figure(b.distinct)} ÷ {figure(max(1.0, a.distinct))}) × {figure(1 - a.null_share)}"
-        return best, formula, "containment of value sets"
-    partners = right.rows * share
-    return min(1.0, partners), f"min(1, {figure(right.rows)} × {figure(share)})", "expected partners a row"
-
-
-def _correlated(
-    operator: Join, left: Estimate, right: Estimate, known: Mapping[Operator, Estimate]
-) -> tuple[float, str, str] | None:
-    """The share of left rows with a partner where the right side equates its attributes with the left row's."""
-    outer = dependent(operator)
-    found: tuple[float, str, str] | None = None
-    pending: list[Operator] = [operator.right] if outer else []
-    while pending:
-        part = pending.pop()
-        if isinstance(part, Select):
-            for term in conjuncts(part.condition):
-                have = _equated(term, outer, left, known[part.input], right.rows)
-                if have is not None and (found is None or have[0] < found[0]):
-                    found = have
-        if isinstance(part, (Select, Project, Join)):
-            pending.extend(inputs(part))
-    return found
-
-
-def _equated(
-    term: Scalar, outer: frozenset[Attribute], left: Estimate, inner: Estimate, partners: float
-) -> tuple[float, str, str] | None:
-    match term:
-        case Comparison(operator=ComparisonOperator.EQUAL, left=Ref(attribute=a), right=Ref(attribute=b)):
-            mine, theirs = (a, b) if a in outer else (b, a)
-            if mine not in outer or theirs not in inner.spread or mine not in left.spread:
-                return None
-            own, other = left.spread[mine], inner.spread[theirs]
-            kept = min(1.0, partners * max(1.0, other.distinct) / max(inner.rows, 1e-9))
-            values = remaining_distinct(other.distinct, inner.rows, kept)
-            have = min(1.0, values / max(1.0, own.distinct)) * (1 - own.null_share)
-            formula = f"min(1, {figure(values)} ÷ {figure(max(1.0, own.distinct))}) × {figure(1 - own.null_share)}"
-            return have, formula, "containment of value sets"
-    return None
-
-
-def _half_join(
-    operator: Join,
-    left: Estimate,
-    right: Estimate,
-    pairs: list[tuple[Attribute, Attribute]],
-    share: float,
-    evidence: Evidence,
-    lines: tuple[Line, ...],
-    known: Mapping[Operator, Estimate],
-) -> Estimate:
-    if operator.kind in (JoinKind.MARK, JoinKind.SINGLE):
-        spread = {**left.spread}
-        if operator.kind is JoinKind.SINGLE:
-            spread.update(right.spread)
-        elif operator.mark is not None:
-            spread[operator.mark] = Distribution(2.0, width=1.0)
-        return Estimate(left.rows, spread, left.evidence, (_same(left),))
-    have, formula, method = _correlated(operator, left, right, known) or _matching(left, right, pairs, share)
-    first = Line("share of left rows with a partner", formula, have, evidence, method)
-    kept = have if operator.kind is JoinKind.SEMI else 1 - have
-    text = "left rows × share with a partner" if operator.kind is JoinKind.SEMI else "left rows × share without a partner"
-    shown = figure(kept) if operator.kind is JoinKind.SEMI else f"(1 - {figure(have)})"
-    rows = left.rows * kept
-    total = Line(text, f"{figure(left.rows)} × {shown}", rows, evidence)
-    own = lines if not pairs else ()
-    spread = {a: thinned(d, left.rows, kept) for a, d in left.spread.items()}
-    return Estimate(rows, spread, evidence, (*own, first, total))
-
-
-def _outer(
-    kind: JoinKind, inner: Estimate, left: Estimate, right: Estimate, pairs: list[tuple[Attribute, Attribute]]
-) -> Estimate:
-    rows, lines, spread = inner.rows, list(inner.lines), dict(inner.spread)
-    share = inner.rows / max(1e-9, left.rows * right.rows)
-    sides = []
-    if kind in (JoinKind.LEFT, JoinKind.FULL):
-        sides.append((left, right, pairs, "left"))
-    if kind in (JoinKind.RIGHT, JoinKind.FULL):
-        sides.append((right, left, [(b, a) for a, b in pairs], "right"))
-    for kept, other, turned, name in sides:
-        have, formula, method = _matching(kept, other, turned, share)
-        lonely = kept.rows * (1 - have)
-        text = f"{name} rows without a partner"
-        lines.append(Line(text, f"{figure(kept.rows)} × (1 - {formula})", lonely, inner.evidence, method))
-        rows += lonely
-    floor = max(side[0].rows for side in sides)
-    terms = " + ".join(figure(line.value) for line in [inner.lines[-1], *lines[len(inner.lines) :]])
-    rows = max(rows, floor)
-    lines.append(Line("matched and unmatched rows, no fewer than the side kept", f"max({figure(floor)}, {terms})", rows, inner.evidence))
-    for kept, other, _, _ in sides:
-        spread.update({a: d for a, d in kept.spread.items()})
-        lonely_share = max(0.0, 1 - inner.rows / max(rows, 1e-9))
-        for a in other.spread:
-            if a not in kept.spread:
-                spread[a] = replace(spread[a], null_share=max(spread[a].null_share, lonely_share))
-    return Estimate(rows, spread, inner.evidence, tuple(lines))
 
 
 # --- the others ----------------------------------------------------------------------------------------------------

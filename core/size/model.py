@@ -2,9 +2,12 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from dataclasses import dataclass
 
+from core.algebra.scalars import Attribute
 from core.catalog.model import Evidence
+from core.size.distribution import Distribution
 
 
 @dataclass(frozen=True, slots=True)
@@ -46,3 +49,20 @@ class Size:
     @property
     def best_evidence(self) -> Evidence:
         return self.evidence if self.measured is None else Evidence.MEASURED
+
+
+@dataclass(frozen=True, slots=True)
+class Estimate:
+    """Rows, the spread of each attribute, and the lines that led there."""
+
+    rows: float
+    spread: Mapping[Attribute, Distribution]
+    evidence: Evidence
+    lines: tuple[Line, ...] = ()
+
+
+def figure(value: float) -> str:
+    """A number as it stands in a derivation: enough digits to follow the arithmetic."""
+    if value == int(value) and abs(value) < 1e15:
+        return str(int(value))
+    return f"{value:.6g}"

@@ -7,11 +7,11 @@ assumed. Different attributes are taken as independent; bounds on one attribute 
 from __future__ import annotations
 
 import re
-from collections.abc import Callable, Mapping
-from dataclasses import dataclass
+from collections.abc import Callable
 
 from core.algebra.notation import scalar_text
 from core.algebra.scalars import (
+    MIRRORED,
     And,
     Attribute,
     Call,
@@ -21,7 +21,6 @@ from core.algebra.scalars import (
     IsNull,
     IsTruth,
     Literal,
-    MIRRORED,
     Not,
     Or,
     Ref,
@@ -31,7 +30,9 @@ from core.algebra.scalars import (
 )
 from core.catalog.model import Evidence
 from core.size.distribution import Distribution
-from core.size.model import Line
+from core.size.equalities import Share, Spread, equality_share, pair_line
+from core.size.model import Line, figure
+from core.size.restrict import bound_of
 from core.size.values import constant
 
 EQUAL_GUESS = 0.1
@@ -43,31 +44,12 @@ _LOWER = (ComparisonOperator.GREATER, ComparisonOperator.AT_LEAST)
 _UPPER = (ComparisonOperator.LESS, ComparisonOperator.AT_MOST)
 
 
-@dataclass(frozen=True, slots=True)
-class Share:
-    """A share of rows, with the lines that say how it was made."""
-
-    value: float
-    lines: tuple[Line, ...]
-    evidence: Evidence
-
-
-Spread = Mapping[Attribute, Distribution]
-
-
-def figure(value: float) -> str:
-    """A number as it stands in a derivation: enough digits to follow the arithmetic."""
-    if value == int(value) and abs(value) < 1e15:
-        return str(int(value))
-    return f"{value:.6g}"
-
-
 def share_of(condition: Scalar, spread: Spread) -> Share:
     """The share of rows for which the condition is true."""
     terms = conjuncts(condition)
     if not terms:
         return Share(1.0, (), Evidence.MEASURED)
-    parts = [*_ranges(terms, spread)]
+    parts = [*_ranges(terms, spread), *_equalities(terms, spread)]
     taken = {id(term) for part in parts for term in part[0]}
     shares = [share for _, share in parts]
     shares += [_term(term, spread) for term in terms if id(term) not in taken]
@@ -92,25 +74,27 @@ def _line(text: str, formula: str, value: float, evidence: Evidence, source: str
     return Share(value, (Line(f"share of rows with {text}", formula, value, evidence, source),), evidence)
 
 
+def _equalities(terms: tuple[Scalar, ...], spread: Spread) -> list[tuple[list[Scalar], Share]]:
+    """Equalities between attributes, taken together: they may cover a key, and one may follow from others."""
+    found: list[Scalar] = []
+    pairs = []
+    for term in terms:
+        match term:
+            case Comparison(operator=ComparisonOperator.EQUAL, left=Ref(attribute=a), right=Ref(attribute=b)):
+                if a in spread and b in spread and a != b:
+                    found.append(term)
+                    pairs.append((a, b))
+    return [(found, equality_share(pairs, spread))] if len(pairs) > 1 else []
+
+
 # --- bounds on one attribute ---------------------------------------------------------------------------------------
-
-
-def _bound(term: Scalar) -> tuple[Attribute, ComparisonOperator, Scalar] | None:
-    """An inequality between an attribute and a constant, attribute first."""
-    if not isinstance(term, Comparison) or term.operator not in (*_LOWER, *_UPPER):
-        return None
-    if isinstance(term.left, Ref) and constant(term.right) is not None:
-        return term.left.attribute, term.operator, term.right
-    if isinstance(term.right, Ref) and constant(term.left) is not None:
-        return term.right.attribute, MIRRORED[term.operator], term.left
-    return None
 
 
 def _ranges(terms: tuple[Scalar, ...], spread: Spread) -> list[tuple[list[Scalar], Share]]:
     """Attributes that are bounded from both sides, each with its terms and the share between the bounds."""
     bounds: dict[Attribute, list[tuple[Scalar, ComparisonOperator, Scalar]]] = {}
     for term in terms:
-        found = _bound(term)
+        found = bound_of(term)
         if found is not None:
             bounds.setdefault(found[0], []).append((term, found[1], found[2]))
     result = []
@@ -249,6 +233,9 @@ def _two_attributes(
     a, b = spread.get(left), spread.get(right)
     known = [d for d in (a, b) if d is not None]
     evidence = min((d.evidence for d in known), default=Evidence.ASSUMED)
+    if operator is ComparisonOperator.EQUAL and a is not None and b is not None and left != right:
+        line = pair_line(left, right, spread)
+        return Share(line.value, (line,), line.evidence)
     if operator in (ComparisonOperator.EQUAL, ComparisonOperator.NOT_DISTINCT) and known:
         most = max(1.0, *(d.distinct for d in known))
         present = 1.0

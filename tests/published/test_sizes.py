@@ -9,7 +9,7 @@ from core.catalog.model import AttributeFacts, Catalog, Evidence, HeavyHitter, R
 from core.language.sql.read import read_sql
 from core.size import size
 from core.size.distribution import Distribution, base_distribution, groups, remaining_distinct
-from core.size.estimate import pair_share
+from core.size.equalities import pair_share
 
 
 def relation(name: str, rows: int, **distinct: int) -> RelationFacts:
