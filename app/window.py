@@ -411,7 +411,14 @@ class Window(QMainWindow):
             engine = DuckEngine.over(data)
             counts: dict[object, int] = {}
             reasons: dict[object, str] = {}
-            watcher = threading.Thread(target=lambda: (cancel.wait(), engine.cancel()), daemon=True)
+            finished = threading.Event()
+
+            def interrupt() -> None:
+                while not finished.wait(0.05):
+                    if cancel.is_set():  # again and again: an interruption between two statements is lost
+                        engine.cancel()
+
+            watcher = threading.Thread(target=interrupt, name="measuring-interrupt", daemon=True)
             watcher.start()
             try:
                 for i, formulation in enumerate(formulations):
@@ -422,8 +429,9 @@ class Window(QMainWindow):
                     counts.update(found)
                     reasons.update(why)
             finally:
-                if not cancel.is_set():
-                    engine.close()
+                finished.set()
+                watcher.join()
+                engine.close()
             return counts, reasons
 
         def then(result: object) -> None:
