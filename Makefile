@@ -16,7 +16,7 @@ $(STAMP): pyproject.toml app/setup_check.py
 	@$(PYTHON) app/setup_check.py venv $(VENV)
 	@echo "Installing Planimeter's packages into $(VENV) ..."
 	@$(PIP) --editable '.[dev]'
-	$(PIP) --only-binary sqlglotc --editable '.[fast]' 2>/dev/null \
+	@$(PIP) --only-binary sqlglotc --editable '.[fast]' 2>/dev/null \
 		|| echo "There is no compiled parser for this Python here: the plain one is used, which is slower and does the same."
 	@touch $(STAMP)
 
