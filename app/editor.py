@@ -164,7 +164,7 @@ class Editor(QWidget):
         if wave is not None:
             made.setUnderlineStyle(QTextCharFormat.UnderlineStyle.WaveUnderline)
             made.setUnderlineColor(wave)
-        mark.cursor, mark.format = cursor, made  # type: ignore[attr-defined]
+        mark.cursor, mark.format = cursor, made
         return mark
 
     def _moved(self) -> None:

@@ -87,7 +87,8 @@ class Below(QWidget):
         self.tabs.setTabText(0, f"Findings ({len(self._found)})")
 
     def _picked(self) -> tuple[str, Finding] | None:
-        row = self.findings.indexOfTopLevelItem(self.findings.currentItem()) if self.findings.currentItem() else -1
+        item = self.findings.currentItem()
+        row = -1 if item is None else self.findings.indexOfTopLevelItem(item)
         return self._found[row] if 0 <= row < len(self._found) else None
 
     def _to_finding(self) -> None:
