@@ -58,4 +58,6 @@ def test_a_machine_path_is_seen(prefix: bytes, root: bytes) -> None:
 
 
 def test_the_middle_of_a_path_is_none() -> None:
-    assert not any(MACHINE_PATH.search(before + b"/tmp/x") for before in (b"build", b"..", b"$FOLDER", b"{folder}"))
+    assert not any(
+        MACHINE_PATH.search(before + b"/" + b"tmp/x") for before in (b"build", b"..", b"$FOLDER", b"{folder}")
+    )
