@@ -45,11 +45,15 @@ class Stage(IntEnum):
 
 @dataclass(slots=True)
 class StepUse:
-    """One use of a common table expression; `columns` are its columns' names by attribute."""
+    """One use of a common table expression, or of a base relation under other attributes.
+
+    `columns` are its columns' names by attribute.
+    """
 
     name: str
     columns: dict[Attribute, str]
     alias: str = ""
+    base: bool = False
 
 
 @dataclass(slots=True)
@@ -83,6 +87,8 @@ class Item:
     kind: JoinKind = JoinKind.INNER
     on: Scalar = TRUE
     lateral: bool = False
+    fields: tuple[str, ...] = ()
+    """For an unnested relation: what its elements call the attributes."""
 
 
 @dataclass(slots=True)

@@ -47,6 +47,7 @@ class View:
     block: Block | None = None
     outer: View | None = None
     places: dict[Attribute, tuple[str, str]] = field(default_factory=dict)
+    fields: dict[Attribute, str] = field(default_factory=dict)
     lone: bool = False
     aliases: set[str] = field(default_factory=set)
     output: set[str] = field(default_factory=set)
@@ -72,7 +73,10 @@ class View:
         if attribute in self.places:
             alias, column = self.places[attribute]
             plain = not alias or (bare and column.lower() not in self.output)
-            return exp.column(_identifier(column), table=None if plain else _identifier(alias))
+            found = exp.column(_identifier(column), table=None if plain else _identifier(alias))
+            if attribute in self.fields:
+                return exp.Dot(this=found, expression=_identifier(self.fields[attribute]))
+            return found
         if self.block is not None and attribute in self.block.definitions:
             definition = self.block.definitions[attribute]
             if isinstance(definition, SubqueryTerm):
@@ -91,17 +95,17 @@ def _plain(name: str) -> bool:
     return name.isidentifier() and name.isascii() and name.lower() not in _RESERVED
 
 
-_RESERVED = frozenset(
-    """
-    all analyse analyze and any array as asc asymmetric at between both by case cast check collate column constraint create
-    cross current_date current_time current_timestamp default deferrable desc describe distinct do else end except exists
-    false fetch filter following for foreign from full grant group grouping having if ilike in initially inner insert
-    intersect interval into is join key lambda lateral leading left like limit natural not null of offset on only or order
-    outer over overlaps partition pivot placing position preceding primary qualify range references returning right row rows
-    sample select set similar some summarize symmetric table then to trailing true unbounded union unique unnest unpivot
-    user using values variadic when where window with
-    """.split()
-)
+_RESERVED_WORDS = """
+    all analyse analyze and any array as asc asymmetric at between both by case cast check collate column
+    constraint create cross current_date current_time current_timestamp default deferrable desc describe distinct
+    do else end except exists false fetch filter following for foreign from full grant group grouping having if
+    ilike in initially inner insert intersect interval into is join key lambda lateral leading left like limit
+    natural not null of offset on only or order outer over overlaps partition pivot placing position preceding
+    primary qualify range references returning right row rows sample select set similar some summarize symmetric
+    table then to trailing true unbounded union unique unnest unpivot user using values variadic when where window
+    with
+"""
+_RESERVED = frozenset(_RESERVED_WORDS.split())
 
 
 # --- queries -------------------------------------------------------------------------------------------------------
@@ -124,8 +128,6 @@ def _set_query(query: SetQuery, outer: View | None, names: Names | None) -> exp.
     result: exp.Expression | None = None
     for part in query.inputs:
         own = {a: shown[mine] for a, mine in zip(part.columns, query.columns, strict=True)} if result is None else None
-        if own is not None and len(own) < len(part.columns):
-            part = derived(part)
         node = cast(exp.Expression, write_query_node(part, outer, own))
         if isinstance(part, SetQuery) or (isinstance(part, Block) and (part.order or part.count or part.offset)):
             node = exp.Subquery(this=node)
@@ -153,7 +155,9 @@ def _select(block: Block, outer: View | None, names: Names | None) -> exp.Query:
     select.set("expressions", columns or [exp.Literal.number(1)])
     if block.distinct:
         select.set("distinct", exp.Distinct())
-    ordering = View(block, outer, view.places, view.lone, view.aliases, {n.lower() for n in shown.values()})
+    ordering = View(
+        block, outer, view.places, view.fields, view.lone, view.aliases, {n.lower() for n in shown.values()}
+    )
     _tail(select, block, ordering, outer, shown)
     return select
 
@@ -189,11 +193,12 @@ def _place(items: list[Item], view: View, taken: set[str]) -> None:
         view.aliases.add(candidate.lower())
         for attribute, column in _item_columns(item).items():
             view.places[attribute] = (candidate, column)
+        view.fields.update(zip(item.attributes, item.fields, strict=False))
 
 
 def _natural_alias(item: Item) -> str:
     match item.body:
-        case Relation(name=name):
+        case Relation(name=name) | StepUse(name=name, base=True):
             return name.rpartition(".")[2]
         case StepUse(name=name):
             return name
@@ -218,8 +223,18 @@ def _item_columns(item: Item) -> dict[Attribute, str]:
             return {a: a.name for a in own}
         case Block() | SetQuery():
             return unique_names(item.body.columns)
+        case Unnest():
+            return _element_columns(item)
         case _:
             return unique_names(item.attributes)
+
+
+def _element_columns(item: Item) -> dict[Attribute, str]:
+    """The columns of an unnested list; elements that are records stand in one column."""
+    if not item.fields:
+        return unique_names(item.attributes)
+    columns = dict.fromkeys(item.attributes[: len(item.fields)], "item")
+    return {**columns, **dict.fromkeys(item.attributes[len(item.fields) :], "place")}
 
 
 def _column(attribute: Attribute, name: str, view: View) -> exp.Expression:
@@ -258,7 +273,7 @@ def _join(item: Item, view: View) -> exp.Join:
 def _item(item: Item, view: View) -> exp.Expression:
     alias = exp.TableAlias(this=_identifier(item.alias)) if item.alias else None
     match item.body:
-        case Relation(name=name):
+        case Relation(name=name) | StepUse(name=name, base=True):
             table = exp.Table(this=_identifier(name)) if "." not in name else _dotted(name)
             if item.alias.lower() != name.rpartition(".")[2].lower():
                 table.set("alias", alias)
@@ -277,7 +292,7 @@ def _item(item: Item, view: View) -> exp.Expression:
             offset = item.body.position is not None
             node = write_scalar(term, view.name)
             return exp.Unnest(
-                expressions=[node], alias=_full_alias(item, unique_names(item.attributes)), offset=offset or None
+                expressions=[node], alias=_full_alias(item, _element_columns(item)), offset=offset or None
             )
         case Block() | SetQuery() as query:
             around = view if item.lateral else view.outer
@@ -292,12 +307,18 @@ def _dotted(name: str) -> exp.Table:
 
 
 def _full_alias(item: Item, names: Names) -> exp.TableAlias:
-    return exp.TableAlias(this=_identifier(item.alias), columns=[_identifier(name) for name in names.values()])
+    return exp.TableAlias(
+        this=_identifier(item.alias), columns=[_identifier(name) for name in dict.fromkeys(names.values())]
+    )
 
 
 def _parenthesised(items: list[Item], view: View) -> exp.Expression:
     first, *others = items
     node = _item(first, view)
+    if isinstance(node, exp.Values):
+        # Joins of a VALUES node would be printed before its alias.
+        alias = node.args["alias"].pop()
+        node = exp.Subquery(this=node, alias=alias)
     node.set("joins", [_join(item, view) for item in others])
     return exp.Subquery(this=node)
 
@@ -458,4 +479,3 @@ def steps_node(steps: list[StepDefinition]) -> exp.With | None:
         alias = exp.TableAlias(this=_identifier(step.name), columns=columns)
         written.append(exp.CTE(this=node, alias=alias))
     return exp.With(expressions=written, recursive=any(step.recursive for step in steps))
-

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import re
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 from typing import cast
 
 from sqlglot import exp
@@ -34,7 +34,7 @@ from core.algebra.scalars import (
     WindowCall,
 )
 from core.algebra.types import Family
-from core.language.sql.forms import bound_arguments, filled
+from core.language.sql.forms import bound_arguments, filled, form_of, hole
 
 Naming = Callable[[Attribute], exp.Expression]
 
@@ -287,3 +287,12 @@ def _bound(bound: tuple[Scalar | None, str], naming: Naming) -> tuple[object, st
     if direction == "current":
         return "CURRENT ROW", None
     return ("UNBOUNDED" if offset is None else write_scalar(offset, naming)), direction.upper()
+
+
+def list_of_rows(names: Sequence[str]) -> str:
+    """The form of the aggregate that gathers rows, its arguments, into a list of records with these field names."""
+    fields = [
+        exp.PropertyEQ(this=exp.to_identifier(name, quoted=True), expression=hole(number))
+        for number, name in enumerate(names)
+    ]
+    return form_of(exp.ArrayAgg(this=exp.Struct(expressions=fields)))
