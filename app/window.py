@@ -37,8 +37,10 @@ from app.panels.operator import OperatorPanel
 from app.theme import qt_palette, style_sheet, system_is_dark
 from app.work import Worker
 from core.algebra.notation import tree_text
+from core.algebra.operators import Operator
 from core.catalog.ddl import CatalogError, catalog_from_ddl
 from core.catalog.files import load_catalog
+from core.catalog.model import Catalog
 from core.compare import Verdict, compare
 from core.drawing.page import CAUTION
 from core.drawing.palette import PALETTES
@@ -51,6 +53,9 @@ from core.sheet import edit
 from core.sheet.document import new_sheet
 from core.sheet.file import SheetError, from_json
 
+Report = Callable[[float, str], None]
+Profiled = tuple[Catalog, list[str]]
+Counted = tuple[dict[Operator, int], dict[Operator, str]]
 SHEET_ENDING = ".planimeter"
 _DRAWINGS = "Drawings (*.svg *.pdf *.png)"
 
@@ -251,12 +256,9 @@ class Window(QMainWindow):
         else:
             self.bench.add_draft(text, path.stem)
 
-    def _use_catalog(self, catalog: object) -> None:
+    def _use_catalog(self, catalog: Catalog) -> None:
         from dataclasses import replace
 
-        from core.catalog.model import Catalog
-
-        assert isinstance(catalog, Catalog)
         sheet = replace(self.bench.sheet, catalog=catalog, measured={})
         for draft in sheet.drafts:
             sheet = edit.with_text(sheet, draft.letter, draft.text, draft.dialect, draft.title)
@@ -292,17 +294,17 @@ class Window(QMainWindow):
         """Profiles data and makes its catalog the sheet's."""
         declared = self.bench.sheet.catalog
 
-        def task(cancel: threading.Event, progress: Callable[[float, str], None]) -> object:
+        def task(cancel: threading.Event, progress: Report) -> Profiled:
             engine = DuckEngine.over(path)
             try:
                 return profile(engine, declared, progress, cancel)
             finally:
                 engine.close()
 
-        def then(result: object) -> None:
+        def then(result: Profiled) -> None:
             from dataclasses import replace
 
-            catalog, notes = result  # type: ignore[misc]
+            catalog, notes = result
             self.bench.history.amend(replace(self.bench.sheet, data=str(path)))
             self._use_catalog(catalog)
             if notes:
@@ -407,10 +409,10 @@ class Window(QMainWindow):
         formulations = [d.formulation for d in sheet.drafts if d.formulation is not None]
         data = sheet.data
 
-        def task(cancel: threading.Event, progress: Callable[[float, str], None]) -> object:
+        def task(cancel: threading.Event, progress: Report) -> Counted:
             engine = DuckEngine.over(data)
-            counts: dict[object, int] = {}
-            reasons: dict[object, str] = {}
+            counts: dict[Operator, int] = {}
+            reasons: dict[Operator, str] = {}
             finished = threading.Event()
 
             def interrupt() -> None:
@@ -422,10 +424,7 @@ class Window(QMainWindow):
             watcher.start()
             try:
                 for i, formulation in enumerate(formulations):
-                    share = 1 / len(formulations)
-                    found, why = measure(
-                        formulation, engine, lambda s, t, i=i, share=share: progress((i + s) * share, t), cancel, 20.0
-                    )
+                    found, why = measure(formulation, engine, _part_of(progress, i, len(formulations)), cancel, 20.0)
                     counts.update(found)
                     reasons.update(why)
             finally:
@@ -434,8 +433,8 @@ class Window(QMainWindow):
                 engine.close()
             return counts, reasons
 
-        def then(result: object) -> None:
-            counts, reasons = result  # type: ignore[misc]
+        def then(result: Counted) -> None:
+            counts, reasons = result
             self.bench.amend(measured={**self.bench.sheet.measured, **counts})
             left = f"; {len(reasons)} could not be counted: {next(iter(reasons.values()))}" if reasons else ""
             self.say(f"{len(counts)} operators counted{left}")
@@ -612,6 +611,11 @@ class Window(QMainWindow):
         self.worker.cancel()
         self.worker.wait(2.0)
         event.accept()
+
+
+def _part_of(progress: Report, number: int, count: int) -> Report:
+    """Progress of one of several tasks, as a part of them all."""
+    return lambda share, text: progress((number + share) / count, text)
 
 
 class CommandSearch(QDialog):

@@ -40,7 +40,7 @@ def export(display: DisplayList, palette: Palette, path: str | Path, payload: by
             image.setText(_CHUNK, base64.b64encode(zlib.compress(payload)).decode())
         if display.title:
             image.setText("Title", display.title)
-        if not image.save(str(target), b"PNG"):
+        if not image.save(str(target)):
             raise ExportError(f"{target} could not be written")
 
 
