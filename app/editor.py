@@ -68,6 +68,11 @@ class Editor(QWidget):
         self.problem.setVisible(False)
         self.problem.setAccessibleName("Problems in the text")
         self.problem.setContentsMargins(10, 6, 10, 8)
+        self.notes = QLabel()
+        self.notes.setWordWrap(True)
+        self.notes.setVisible(False)
+        self.notes.setAccessibleName("Assumptions made in reading")
+        self.notes.setContentsMargins(10, 6, 10, 8)
         self.head = QLabel()
         self.head.setContentsMargins(10, 8, 10, 6)
         layout = QVBoxLayout(self)
@@ -75,6 +80,7 @@ class Editor(QWidget):
         layout.setSpacing(0)
         layout.addWidget(self.head)
         layout.addWidget(self.field, 1)
+        layout.addWidget(self.notes)
         layout.addWidget(self.problem)
         self._timer = QTimer(self)
         self._timer.setSingleShot(True)
@@ -93,7 +99,8 @@ class Editor(QWidget):
         self.colours.palette = palette
         self.colours.rehighlight()
         self.problem.setStyleSheet(f"color: {palette['accent']}; background: {palette['panel']};")
-        self.head.setStyleSheet(f"color: {palette['soft']};")
+        for label in (self.head, self.notes):
+            label.setStyleSheet(f"color: {palette['soft']};")
         self.mark_selection()
 
     def refresh(self) -> None:
@@ -111,6 +118,9 @@ class Editor(QWidget):
         self.field.setReadOnly(rewritten)
         self.head.setText(f"{draft.name}  ·  {draft.subtitle}" + ("  ·  written by Planimeter" if rewritten else ""))
         self._show_problems(() if rewritten else draft.problems)
+        notes = draft.formulation.notes if draft.formulation is not None and not draft.problems and not rewritten else ()
+        self.notes.setText("\n".join(notes))
+        self.notes.setVisible(bool(notes))
         self.mark_selection()
 
     def _typed(self) -> None:

@@ -8,7 +8,8 @@ from pathlib import Path
 from PySide6.QtCore import QObject, Signal
 
 from core.algebra.formulation import Formulation
-from core.algebra.operators import Operator
+from core.algebra.operators import Join, Operator
+from core.algebra.scalars import refs
 from core.catalog.model import Catalog
 from core.compare.align import Alignment, align
 from core.derive.facts import Facts
@@ -252,6 +253,7 @@ class Workbench(QObject):
             mine = [Balloon(number, operator) for number, letter, operator, _ in callouts if letter == draft.letter]
             top = self.findings(draft)[:1]
             view = PlanView(
+                notes={f.operator: _fan_note(f) for f in self.findings(draft) if f.kind == "fan-out join"},
                 soft=frozenset(soft),
                 accent=frozenset(f.operator for f in top),
                 selected=self.selection if selection and draft.letter == self.active else None,
@@ -332,6 +334,13 @@ class Workbench(QObject):
             ("drawn by", self.sheet.author or "–"),
             ("date", self.sheet.created.isoformat()),
         ]
+
+
+def _fan_note(finding: Finding) -> str:
+    """The second line of a join that multiplies rows: what a reader needs to know of it."""
+    assert isinstance(finding.operator, Join)
+    names = ", ".join(sorted({a.name for a in refs(finding.operator.condition)}))
+    return f"{names}: a key of neither side"
 
 
 def _remember(drawn: Drawn, draft: Draft, plan: PlanDrawing) -> None:

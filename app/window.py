@@ -255,6 +255,7 @@ class Window(QMainWindow):
             self.bench.do(f"open {path.name}", edit.with_text(self.bench.sheet, empty[0].letter, text, title=path.stem))
         else:
             self.bench.add_draft(text, path.stem)
+        self.canvas.fit()
 
     def _use_catalog(self, catalog: Catalog) -> None:
         from dataclasses import replace
@@ -284,6 +285,7 @@ class Window(QMainWindow):
 
     def open_demo_query(self, name: str) -> None:
         self.bench.add_draft(demo_sheet.query_text(name), name)
+        self.canvas.fit()
 
     def data_dialog(self) -> None:
         path = QFileDialog.getExistingDirectory(self, "A folder of Parquet, CSV or JSON files")
@@ -394,6 +396,7 @@ class Window(QMainWindow):
 
     def copy_draft(self) -> None:
         self.bench.copy_draft()
+        self.canvas.fit()
 
     def remove_draft(self) -> None:
         self.bench.remove_draft()

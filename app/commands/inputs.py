@@ -80,7 +80,10 @@ def query_of(name: str, asked: argparse.Namespace, ground: Ground) -> Formulatio
         return _sheet_query(name, ground)
     text = read_text(name)
     try:
-        return read_sql(text, ground.catalog, asked.dialect)
+        formulation = read_sql(text, ground.catalog, asked.dialect)
+        for note in formulation.notes:
+            print(f"note: {note}", file=sys.stderr)
+        return formulation
     except ReadError as error:
         shown = "standard input" if name == "-" else name
         raise InputError(str(ReadError(error.diagnostics, text, shown))) from error

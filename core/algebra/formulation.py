@@ -40,7 +40,8 @@ class Formulation:
 
     `names` are the steps: operators that the text defines by name (common table expressions). `aliases` are what the
     text calls a derived table, or one use of a step (then the operator is the renaming over the step). `spans` say where in `text` an operator was written. Both are kept by operator identity; after a rewrite an operator
-    that is only rebuilt over changed inputs keeps its name and span; `rewritten` says that `text` is no longer its text.
+    that is only rebuilt over changed inputs keeps its name and span; `rewritten` says that `text` is no longer its text. `notes` are what
+    had to be assumed in reading, in words.
     """
 
     outputs: tuple[Output, ...]
@@ -50,6 +51,7 @@ class Formulation:
     text: str = ""
     dialect: str = "duckdb"
     rewritten: bool = False
+    notes: tuple[str, ...] = ()
 
     def __post_init__(self) -> None:
         if not self.outputs:

@@ -7,9 +7,9 @@ from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field
 
 from core.algebra.formulation import Formulation
-from core.algebra.graph import inputs, postorder, scalars
+from core.algebra.graph import dependent, inputs, postorder, scalars
 from core.algebra.notation import Naming
-from core.algebra.operators import Operator, Relation
+from core.algebra.operators import Join, Operator, Relation
 from core.algebra.scalars import Attribute, refs
 from core.catalog.model import Catalog
 from core.drawing.display import ACCENT, INK, SOFT, Circle, DisplayList, Line, Text
@@ -141,6 +141,8 @@ def _plate(
     name = formulation.names.get(operator)
     if name and not note and not isinstance(operator, Relation):
         note = f"step {name}"
+    if not note and isinstance(operator, Join) and dependent(operator):
+        note = "for each row: " + ", ".join(sorted(a.name for a in dependent(operator)))
     return plate_of(
         operator,
         owner,

@@ -11,7 +11,7 @@ from sqlglot.errors import ParseError, SqlglotError, TokenError
 
 from core.algebra.formulation import Formulation, IllegalFormulation, Output, Span
 from core.catalog.model import Catalog
-from core.language.diagnostic import Diagnostic, ReadError
+from core.language.diagnostic import Diagnostic, ReadError, position
 from core.language.sql.depth import deep
 from core.language.sql.queries import read_query
 from core.language.sql.reading import Block, Reading
@@ -72,10 +72,21 @@ def _reading(
 def _formulation(result: Result, reading: Reading) -> Formulation:
     output = Output("answer", result.plan, result.columns)
     try:
-        made = Formulation((output,), reading.names, reading.aliases, reading.spans, reading.text, reading.dialect)
+        made = Formulation(
+            (output,), reading.names, reading.aliases, reading.spans, reading.text, reading.dialect, notes=_notes(reading)
+        )
     except IllegalFormulation as fault:
         raise ReadError([Diagnostic("not-represented", str(fault))], reading.text) from fault
     return made
+
+
+def _notes(reading: Reading) -> tuple[str, ...]:
+    """What was assumed, with the line it concerns."""
+    found = []
+    for note in reading.diagnostics:
+        where = "" if note.span is None else f"line {position(reading.text, note.span.start)[0]}: "
+        found.append(f"{where}{note.message}" + (f" ({note.help})" if note.help else ""))
+    return tuple(found)
 
 
 def _parsed(text: str, dialect: str) -> exp.Expression:
