@@ -7,7 +7,6 @@ assumed. Different attributes are taken as independent; bounds on one attribute 
 from __future__ import annotations
 
 import re
-from collections.abc import Callable
 
 from core.algebra.notation import scalar_text
 from core.algebra.scalars import (
@@ -33,6 +32,7 @@ from core.size.distribution import Distribution
 from core.size.equalities import Share, Spread, equality_share, pair_line
 from core.size.model import Line, figure
 from core.size.restrict import bound_of
+from core.size.tried import tried, unwrapped
 from core.size.values import constant
 
 EQUAL_GUESS = 0.1
@@ -46,7 +46,7 @@ _UPPER = (ComparisonOperator.LESS, ComparisonOperator.AT_MOST)
 
 def share_of(condition: Scalar, spread: Spread) -> Share:
     """The share of rows for which the condition is true."""
-    terms = conjuncts(condition)
+    terms = tuple(bound for term in conjuncts(condition) for bound in unwrapped(term))
     if not terms:
         return Share(1.0, (), Evidence.MEASURED)
     parts = [*_ranges(terms, spread), *_equalities(terms, spread)]
@@ -131,6 +131,9 @@ def _between(
 
 def _term(term: Scalar, spread: Spread) -> Share:
     text = scalar_text(term)
+    exact = tried(term, text, spread, sample=False)
+    if exact is not None:
+        return exact
     match term:
         case Literal(text=None):
             return _line(text, "0", 0.0, Evidence.MEASURED)
@@ -143,8 +146,6 @@ def _term(term: Scalar, spread: Spread) -> Share:
             return _in_list(attribute, items, text, spread)
         case IsNull(term=Ref(attribute=attribute)):
             return _is_null(attribute, text, spread)
-        case IsNull():
-            return _line(text, figure(EQUAL_GUESS), EQUAL_GUESS, Evidence.ASSUMED)
         case IsTruth(term=inner, value=value):
             return _term(inner if value else Not(inner), spread)
         case Or(terms=terms):
@@ -162,6 +163,11 @@ def _term(term: Scalar, spread: Spread) -> Share:
                 return _line(text, figure(share), share, found.evidence, "heavy hitters")
         case _:
             pass
+    sampled = tried(term, text, spread)
+    if sampled is not None:
+        return sampled
+    if isinstance(term, IsNull):
+        return _line(text, figure(EQUAL_GUESS), EQUAL_GUESS, Evidence.ASSUMED)
     return _line(text, figure(UNKNOWN_GUESS), UNKNOWN_GUESS, Evidence.ASSUMED, "no statistics say anything of this")
 
 
@@ -181,11 +187,29 @@ def _comparison(term: Comparison, text: str, spread: Spread) -> Share:
             share = (1 - found.null_share) / max(1.0, found.distinct)
             formula = f"(1 - {figure(found.null_share)}) ÷ {figure(max(1.0, found.distinct))}"
             return _line(text, formula, share, found.evidence, "distinct count")
+    sampled = tried(term, text, spread)
+    if sampled is not None:
+        return sampled
     if operator in (ComparisonOperator.EQUAL, ComparisonOperator.NOT_DISTINCT):
+        sides = [_values_of(side, spread) for side in (left, right)]
+        if all(sides):
+            most = max(1.0, *(side for side in sides if side))
+            return _line(text, f"1 ÷ {figure(most)}", 1 / most, Evidence.ASSUMED, "containment of value sets")
         return _line(text, figure(EQUAL_GUESS), EQUAL_GUESS, Evidence.ASSUMED, "System R 1979")
     if operator in (ComparisonOperator.UNEQUAL, ComparisonOperator.DISTINCT):
         return _line(text, f"1 - {figure(EQUAL_GUESS)}", 1 - EQUAL_GUESS, Evidence.ASSUMED, "System R 1979")
     return _line(text, figure(RANGE_GUESS), RANGE_GUESS, Evidence.ASSUMED, "System R 1979")
+
+
+def _values_of(scalar: Scalar, spread: Spread) -> float | None:
+    """The most distinct values of a computed term; None where it reads something unknown, or nothing."""
+    read = refs(scalar)
+    if not read or not read <= spread.keys():
+        return None
+    product = 1.0
+    for attribute in read:
+        product = min(product * max(1.0, spread[attribute].values), 1e15)
+    return product
 
 
 def _against_constant(
@@ -311,31 +335,24 @@ def _negation(inner: Scalar, text: str, spread: Spread) -> Share:
 
 
 def _like(term: Call, text: str, spread: Spread) -> Share:
-    """LIKE over an attribute: exact over the heavy hitters, the prefix by the histogram, a guess for the rest."""
+    """LIKE over an attribute: a prefix by the histogram, another pattern tried on the known values, else a guess."""
     subject, pattern = term.arguments[0], constant(term.arguments[1]) if len(term.arguments) > 1 else None
     found = spread.get(subject.attribute) if isinstance(subject, Ref) else None
-    if found is None or not isinstance(pattern, str):
-        return _line(text, figure(LIKE_GUESS), LIKE_GUESS, Evidence.ASSUMED)
-    matches = like_pattern(pattern, term.name == "ilike")
-    sure = sum(share for value, share in found.heavy if isinstance(value, str) and matches(value))
-    if found.rest_share <= 1e-9:
-        return _line(text, figure(sure), sure, found.evidence, "heavy hitters")
+    if found is not None and isinstance(pattern, str):
+        prefix, rest = _prefix(pattern)
+        if prefix and rest == "%" and term.name == "like" and found.texts:
+            low, high = found.share_below(prefix, False), found.share_below(prefix + "\U0010ffff", False)
+            if low is not None and high is not None:
+                # A prefix that falls within one bucket may hold anything up to that bucket: half of it is taken.
+                least = 0.5 * found.rest_share / (len(found.texts) - 1) if found.heavy_share < high else 0.0
+                value = max(least, high - low)
+                formula = f"max({figure(least)}, {figure(high)} - {figure(low)})"
+                return _line(text, formula, value, found.evidence, "histogram of the prefix")
+    sampled = tried(term, text, spread)
+    return sampled or _line(text, figure(LIKE_GUESS), LIKE_GUESS, Evidence.ASSUMED)
+
+
+def _prefix(pattern: str) -> tuple[str, str]:
+    """The text before the first wildcard of a LIKE pattern, and the rest."""
     prefix = re.split(r"[%_]", pattern, maxsplit=1)[0]
-    if prefix and term.name == "like" and found.texts:
-        low, high = found.share_below(prefix, False), found.share_below(prefix + "\U0010ffff", False)
-        if low is not None and high is not None:
-            # A prefix that falls within one bucket may hold anything up to that bucket: half of it is taken.
-            least = 0.5 * found.rest_share / (len(found.texts) - 1) if found.heavy_share < high else 0.0
-            value = max(least, high - low)
-            formula = f"max({figure(least)}, {figure(high)} - {figure(low)})"
-            return _line(text, formula, value, found.evidence, "histogram of the prefix")
-    value = sure + found.rest_share * LIKE_GUESS
-    formula = f"{figure(sure)} + {figure(found.rest_share)} × {LIKE_GUESS}"
-    return _line(text, formula, value, Evidence.ASSUMED, "heavy hitters, and a guess for the rest")
-
-
-def like_pattern(pattern: str, fold: bool = False) -> Callable[[str], bool]:
-    """A test whether a text matches a LIKE pattern (without ESCAPE)."""
-    pieces = (".*" if c == "%" else "." if c == "_" else re.escape(c) for c in pattern)
-    compiled = re.compile("".join(pieces), re.DOTALL | (re.IGNORECASE if fold else 0))
-    return lambda text: compiled.fullmatch(text) is not None
+    return prefix, pattern[len(prefix) :]

@@ -63,11 +63,19 @@ def _arithmetic(operator: ArithmeticOperator, left: Scalar, right: Scalar) -> Va
         if isinstance(base, date) and operator in (ArithmeticOperator.ADD, ArithmeticOperator.SUBTRACT):
             return _shifted(base, right.text, 1 if operator is ArithmeticOperator.ADD else -1)
         return None
-    a: Any = constant(left)
-    b: Any = constant(right)
+    a, b = constant(left), constant(right)
+    return None if a is None or b is None else arithmetic(operator, a, b)
+
+
+def arithmetic(operator: ArithmeticOperator, left: Value, right: Value) -> Value | None:
+    """The result of a sign between two values; None where it is not worked out here."""
+    a: Any = left
+    b: Any = right
     if isinstance(a, date) and isinstance(b, int) and not isinstance(a, datetime):
         if operator in (ArithmeticOperator.ADD, ArithmeticOperator.SUBTRACT):
             return a + timedelta(days=b if operator is ArithmeticOperator.ADD else -b)
+    if operator is ArithmeticOperator.CONCATENATE and isinstance(a, str) and isinstance(b, str):
+        return a + b
     if not isinstance(a, (int, float, Decimal)) or not isinstance(b, (int, float, Decimal)):
         return None
     if isinstance(a, float) or isinstance(b, float):
