@@ -7,12 +7,13 @@ from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field
 
 from core.algebra.formulation import Formulation
-from core.algebra.graph import dependent, inputs, postorder, scalars
+from core.algebra.graph import dependent, inputs, parents, postorder, scalars
 from core.algebra.notation import Naming
 from core.algebra.operators import Join, Operator, Relation
 from core.algebra.scalars import Attribute, refs
 from core.catalog.model import Catalog
 from core.drawing.display import ACCENT, INK, SOFT, Circle, DisplayList, Line, Text
+from core.drawing.graph_layout import place
 from core.drawing.plates import ANCHOR, Plate, draw_plate, plate_of
 from core.drawing.tidy import Node, lay_out
 from core.size import Size
@@ -67,6 +68,9 @@ def draw_plan(
     """The tree of a formulation, upper left corner near (0, 0). Owners are `prefix` and a number from the answer down."""
     shown = view or PlanView()
     naming = _unclear(formulation)
+    graph = _draw_graph(formulation, sizes, catalog, prefix, decades, shown, naming)
+    if graph is not None:
+        return graph
     plates: dict[str, Plate] = {}
     operators: dict[str, Operator] = {}
     owners: dict[Operator, str] = {}
@@ -102,6 +106,42 @@ def draw_plan(
         out.extend(draw_plate(plate, node.x - ANCHOR, node.y, decades))
     _balloons(out, shown.balloons, owners)
     return PlanDrawing(out, operators, owners)
+
+
+def _draw_graph(
+    formulation: Formulation,
+    sizes: Mapping[Operator, Size],
+    catalog: Catalog,
+    prefix: str,
+    decades: int,
+    shown: PlanView,
+    naming: Naming,
+) -> PlanDrawing | None:
+    """A formulation with shared parts as a graph: each operator once, an edge from everyone who reads it.
+
+    None where nothing is shared, or where Graphviz is not at hand.
+    """
+    readers = parents(*formulation.roots())
+    if all(len(several) < 2 for several in readers.values()):
+        return None
+    operators = list(reversed(formulation.operators()))
+    owners = {operator: f"{prefix}{i + 1}" for i, operator in enumerate(operators)}
+    plates = {o: _plate(op, o, formulation, sizes, catalog, naming, shown) for op, o in owners.items()}
+    edges = [(owners[op], owners[below]) for op in operators for below in inputs(op)]
+    placed = place({o: (round(p.width, 1), p.height + 8) for o, p in plates.items()}, edges)
+    if placed is None:
+        return None
+    out = DisplayList()
+    by_owner = {owner: operator for operator, owner in owners.items()}
+    for (above, below), corners in zip(edges, placed.edges, strict=True):
+        soft = by_owner[below] in shown.soft
+        accent = by_owner[below] in shown.accent and by_owner[above] not in shown.soft
+        out.add(Line(tuple(corners), ACCENT if accent else SOFT if soft else INK, 1.8 if accent else 1.2))
+    for owner, plate in plates.items():
+        x, y = placed.nodes[owner]
+        out.extend(draw_plate(plate, x - plate.width / 2, y - plate.height / 2, decades))
+    _balloons(out, shown.balloons, owners)
+    return PlanDrawing(out, by_owner, owners)
 
 
 def _all(root: Node) -> list[Node]:

@@ -189,3 +189,32 @@ def test_ratios_and_bytes() -> None:
     assert ratio_text(5, 5) == "="
     assert bytes_text(41.6e9) == "41.6 GB"
     assert bytes_text(912) == "912 B"
+
+
+SHARED = "with x as (select a, b from t where h > 0) select p.a, q.b from x p join x q on p.a = q.b join x z on z.a = q.a"
+
+
+def test_shared_parts_are_drawn_once_as_a_graph(qtbot: QtBot) -> None:
+    """Graphviz runs in a process of its own; every operator has one plate, and an edge from everyone who reads it."""
+    import sys
+
+    from core.algebra.graph import inputs
+    from core.drawing.display import Line
+    from tests.generate.queries import SCHEMA
+
+    bench = bench_of([SHARED], SCHEMA)
+    drawn = bench.draw()
+    formulation = bench.sheet.drafts[0].formulation
+    assert formulation is not None
+    assert len(drawn.operators) == len(formulation.operators())
+    edges = [item for item in drawn.display.items if isinstance(item, Line) and not item.owner and item.weight >= 1.2]
+    assert len(edges) >= sum(len(inputs(op)) for op in formulation.operators())
+    assert "pygraphviz" not in sys.modules
+
+
+def test_without_graphviz_a_shared_part_is_named_at_its_second_place(qtbot: QtBot, monkeypatch: pytest.MonkeyPatch) -> None:
+    from tests.generate.queries import SCHEMA
+
+    monkeypatch.setattr("core.drawing.plan.place", lambda *_: None)
+    texts = [t.text for t in bench_of([SHARED], SCHEMA).draw().display.texts()]
+    assert any("drawn beside" in text for text in texts)
