@@ -37,7 +37,7 @@ def size(
     order = postorder(*roots)
     for operator in order:
         below = [estimates[part] for part in inputs(operator)]
-        found = estimate(operator, below, catalog, estimates)
+        found = estimate(operator, below, known, estimates)
         limits = bounds(operator, [ranges[part] for part in inputs(operator)], known)
         found, clamped = _clamped(found, limits)
         estimates[operator], ranges[operator] = found, limits

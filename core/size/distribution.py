@@ -179,6 +179,33 @@ def groups(combinations: float, rows: float) -> float:
     return float(combinations * (1.0 - (1.0 - 1.0 / combinations) ** rows))
 
 
+def moments(found: Distribution) -> tuple[float, float] | None:
+    """Mean and variance of the values that are not NULL; None where too little is known of them.
+
+    Heavy hitters at their values, each bucket of the histogram as evenly filled, no histogram as one bucket.
+    """
+    pieces: list[tuple[float, float, float]] = []
+    for value, share in found.heavy:
+        place = None if isinstance(value, str) else number(value)
+        if place is None:
+            return None
+        pieces.append((share, place, place))
+    if found.rest_distinct >= 0.5 and found.rest_share > 0:
+        bounds = found.bounds
+        if len(bounds) < 2:
+            if found.low is None or found.high is None:
+                return None
+            bounds = (found.low, found.high)
+        each = found.rest_share / (len(bounds) - 1)
+        pieces.extend((each, a, b) for a, b in zip(bounds, bounds[1:], strict=False))
+    total = sum(share for share, _, _ in pieces)
+    if total <= 0:
+        return None
+    mean = sum(share * (a + b) / 2 for share, a, b in pieces) / total
+    variance = sum(share * (((a + b) / 2 - mean) ** 2 + (b - a) ** 2 / 12) for share, a, b in pieces) / total
+    return mean, variance
+
+
 # --- narrowing by conditions on the attribute itself -----------------------------------------------------------------
 
 

@@ -30,14 +30,14 @@ from core.algebra.operators import (
 )
 from core.algebra.scalars import (
     Attribute,
-    Literal,
-    Ref,
     Scalar,
 )
 from core.algebra.types import assumed_bytes
-from core.algebra.typing import type_of
 from core.catalog.model import Catalog, Evidence
-from core.size.distribution import Distribution, Origin, base_distribution, groups, thinned
+from core.derive.facts import Facts
+from core.size.computed import computed
+from core.size.distribution import Distribution, Origin, base_distribution, thinned
+from core.size.grouping import group, grouped
 from core.size.joins import join
 from core.size.model import Estimate, Line, figure
 from core.size.restrict import restricted
@@ -49,14 +49,16 @@ ASSUMED_ROWS = 1000.0
 Spread = dict[Attribute, Distribution]
 
 
-def estimate(operator: Operator, below: list[Estimate], catalog: Catalog, known: Mapping[Operator, Estimate]) -> Estimate:
+def estimate(
+    operator: Operator, below: list[Estimate], facts: Facts, known: Mapping[Operator, Estimate]
+) -> Estimate:
     """The estimate of an operator from those of its inputs. In a correlated part it is for one outer row.
 
     `known` holds the estimates of everything below.
     """
     match operator:
         case Relation():
-            return _relation(operator, catalog)
+            return _relation(operator, facts.catalog)
         case Values(rows=rows):
             count = float(len(rows))
             return Estimate(count, _fresh_spread(operator, count), Evidence.MEASURED, (_line("rows written out", figure(count), count),))
@@ -72,11 +74,11 @@ def estimate(operator: Operator, below: list[Estimate], catalog: Catalog, known:
         case SetOperation():
             return _set_operation(operator, below)
         case Distinct():
-            return _grouped(operator, attributes(operator), below[0])
-        case Group(keys=keys):
-            return _group(operator, keys, below[0])
+            return grouped(operator, attributes(operator), below[0], facts)
+        case Group():
+            return group(operator, below[0], facts)
         case Nest(keys=keys):
-            return _grouped(operator, keys, below[0])
+            return grouped(operator, keys, below[0], facts)
         case Divide():
             return _divide(operator, below)
         case Window():
@@ -133,63 +135,11 @@ def _selected(below: Estimate, condition: Scalar) -> Estimate:
 
 
 def _project(operator: Project, below: Estimate) -> Estimate:
-    spread: Spread = {}
-    for column in operator.columns:
-        if isinstance(column.value, Ref) and column.value.attribute in below.spread:
-            spread[column.attribute] = below.spread[column.value.attribute]
-        elif isinstance(column.value, Literal):
-            spread[column.attribute] = Distribution(1.0, width=float(assumed_bytes(type_of(column.value))))
-        else:
-            read = [below.spread[a].distinct for a in _refs(column.value) if a in below.spread]
-            product = 1.0
-            for count in read:
-                product = min(product * max(1.0, count), 1e15)
-            most = min(product if read else 1.0, max(1.0, below.rows))
-            spread[column.attribute] = Distribution(most, width=float(assumed_bytes(type_of(column.value))))
+    spread = {c.attribute: computed(c.value, below.spread, below.rows) for c in operator.columns}
     return Estimate(below.rows, spread, below.evidence, (_same(below),))
 
 
-def _refs(value: object) -> frozenset[Attribute]:
-    from core.algebra.scalars import Node, refs
-
-    return refs(value) if isinstance(value, Node) else frozenset()
-
-
 # --- the others ----------------------------------------------------------------------------------------------------
-
-
-def _grouped(operator: Operator, keys: tuple[Attribute, ...], below: Estimate) -> Estimate:
-    combinations, evidence, parts = 1.0, below.evidence, []
-    for key in keys:
-        found = below.spread[key]
-        count = max(1.0, found.distinct + (1 if found.null_share > 0 else 0))
-        combinations = min(combinations * count, 1e15)
-        evidence = min(evidence, found.evidence)
-        parts.append(figure(count))
-    rows = min(groups(combinations, below.rows), below.rows)
-    product = Line("combinations of key values", " × ".join(parts) or "1", combinations, evidence)
-    m, n = figure(combinations), figure(below.rows)
-    formula = f"min({n}, {m} × (1 - (1 - 1 ÷ {m}) ^ {n}))" if 1 < combinations <= 1e12 else f"min({n}, {m})"
-    total = Line("groups that rows falling at random leave non-empty", formula, rows, evidence, "Cardenas 1975")
-    spread = {a: replace(d, distinct=min(d.distinct, max(1.0, rows)), heavy=(), bounds=d.bounds) for a, d in below.spread.items() if a in keys}
-    for attribute in attributes(operator):
-        spread.setdefault(attribute, Distribution(max(1.0, rows / 2), width=float(assumed_bytes(attribute.type))))
-    return Estimate(rows, spread, evidence, (product, total))
-
-
-def _group(operator: Group, keys: tuple[Attribute, ...], below: Estimate) -> Estimate:
-    if operator.sets is not None:
-        parts = [_grouped(operator, part, below) if part else None for part in operator.sets]
-        rows = sum(1.0 if part is None else part.rows for part in parts)
-        evidence = min((part.evidence for part in parts if part is not None), default=below.evidence)
-        formula = " + ".join(figure(1.0 if part is None else part.rows) for part in parts)
-        spread = {k: v for part in parts if part is not None for k, v in part.spread.items()}
-        spread = {**_fresh_spread(operator, rows), **spread}
-        return Estimate(rows, spread, evidence, (Line("groups of every grouping set", formula, rows, evidence),))
-    if not keys:
-        spread = {a: Distribution(1.0, width=float(assumed_bytes(a.type))) for a in attributes(operator)}
-        return Estimate(1.0, spread, Evidence.MEASURED, (_line("one group of all rows", "1", 1.0),))
-    return _grouped(operator, keys, below)
 
 
 def _set_operation(operator: SetOperation, below: list[Estimate]) -> Estimate:
@@ -206,8 +156,8 @@ def _set_operation(operator: SetOperation, below: list[Estimate]) -> Estimate:
         lines: tuple[Line, ...] = (Line("the inputs' rows together", formula, value, evidence),)
         if operator.distinct:
             merged = Estimate(value, spread, evidence)
-            grouped = _grouped(operator, operator.attributes, merged)
-            return replace(grouped, lines=(*lines, *grouped.lines))
+            whole = grouped(operator, operator.attributes, merged)
+            return replace(whole, lines=(*lines, *whole.lines))
     elif operator.kind is SetKind.INTERSECT:
         value = min(rows) / 2
         lines = (Line("half of the smaller input", f"min({', '.join(figure(r) for r in rows)}) ÷ 2", value, Evidence.ASSUMED),)

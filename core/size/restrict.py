@@ -22,6 +22,7 @@ from core.catalog.model import Value
 from core.derive.reject import rejects_null_each
 from core.size.distribution import Distribution, narrowed_between, narrowed_to, present, remaining_distinct
 from core.size.equalities import joined, ordered
+from core.size.tried import passing, unwrapped
 from core.size.values import constant, number
 
 _EQUAL = (ComparisonOperator.EQUAL, ComparisonOperator.NOT_DISTINCT)
@@ -34,7 +35,7 @@ def restricted(
     spread: Mapping[Attribute, Distribution], condition: Scalar, rows: float, share: float
 ) -> dict[Attribute, Distribution]:
     """The distributions of the rows for which the condition is true: this share of so many rows."""
-    terms = conjuncts(condition)
+    terms = tuple(bound for term in conjuncts(condition) for bound in unwrapped(term))
     narrowed: dict[Attribute, Distribution] = {}
     for term in terms[:_MOST_TERMS]:
         for attribute, found in _narrowed(term, {**spread, **narrowed} if narrowed else spread):
@@ -75,8 +76,6 @@ def _narrowed(term: Scalar, spread: Mapping[Attribute, Distribution]) -> Sequenc
                 return tuple(zip((a, b), joined(spread[a], spread[b]), strict=True))
         case IsNull(term=Ref(attribute=a)) if a in spread:
             return ((a, _only_null(spread[a])),)
-        case Or():
-            return _alternatives(term, spread)
         case _:
             pass
     values = _values(term)
@@ -88,7 +87,10 @@ def _narrowed(term: Scalar, spread: Mapping[Attribute, Distribution]) -> Sequenc
         if bound[1] in _BELOW:
             return ((bound[0], narrowed_between(spread[bound[0]], None, place)),)
         return ((bound[0], narrowed_between(spread[bound[0]], place, None)),)
-    return ()
+    held = passing(term, spread)
+    if held is not None:
+        return ((held[0], narrowed_to(spread[held[0]], held[1])),)
+    return _alternatives(term, spread) if isinstance(term, Or) else ()
 
 
 def _only_null(found: Distribution) -> Distribution:

@@ -33,7 +33,7 @@ from core.size.equalities import Share, Spread, equality_share, pair_line
 from core.size.model import Line, figure
 from core.size.restrict import bound_of
 from core.size.tried import tried, unwrapped
-from core.size.values import constant
+from core.size.values import constant, number
 
 EQUAL_GUESS = 0.1
 RANGE_GUESS = 1 / 3
@@ -225,6 +225,9 @@ def _against_constant(
         null = found.null_share if operator is ComparisonOperator.UNEQUAL else 0.0
         formula = f"max(0, 1 - {figure(null)} - {figure(equal)})"
         return _line(text, formula, 1 - null - equal, found.evidence, _equal_source(found))
+    place = number(value)
+    if found.normal is not None and place is not None:
+        return _of_normal(found, operator in _UPPER, place, text)
     inclusive = operator in (ComparisonOperator.AT_MOST, ComparisonOperator.GREATER)
     below = found.share_below(value, inclusive) if found.evidence > Evidence.ASSUMED else None
     if below is None:
@@ -234,6 +237,27 @@ def _against_constant(
     formula = f"max(0, 1 - {figure(found.null_share)} - {figure(below)})"
     value = 1 - found.null_share - below
     return _line(text, formula, value, found.evidence, "histogram and heavy hitters")
+
+
+def _of_normal(found: Distribution, upper: bool, place: float, text: str) -> Share:
+    """The share of a computed figure below (or above) a place, the figure taken as normal.
+
+    Page's formula for the pocket calculator, Applied Statistics 26(1) 1977: 1 / (1 + e^-(1.5976 z + 0.07056 z^3)).
+    """
+    assert found.normal is not None
+    mean, deviation = found.normal
+    if deviation <= 0:
+        value = float(mean < place if upper else mean > place)
+        return _line(text, figure(value), value, found.evidence, f"every group has {figure(mean)}")
+    sign = 1 if upper else -1
+    z = min(6.0, max(-6.0, sign * (place - mean) / deviation))
+    inner = f"({figure(place)} - {figure(mean)})" if upper else f"({figure(mean)} - {figure(place)})"
+    distance = Line("deviations from the mean", f"min(6, max(-6, {inner} ÷ {figure(deviation)}))", z, found.evidence)
+    value = 1 / (1 + 2.718282 ** -(1.5976 * z + 0.07056 * z**3))
+    shown = f"({figure(z)})" if z < 0 else figure(z)
+    formula = f"1 ÷ (1 + 2.718282 ^ (0 - 1.5976 × {shown} - 0.07056 × {shown} ^ 3))"
+    share = _line(text, formula, value, found.evidence, "taken as normal; Page 1977")
+    return Share(share.value, (distance, *share.lines), share.evidence)
 
 
 def _equal_formula(found: Distribution, value: object, share: float) -> tuple[str, float]:

@@ -59,6 +59,23 @@ def _holds(term: Scalar, attribute: Attribute, value: Value | None) -> bool:
     return applied(term, {attribute: value}) is True
 
 
+def passing(term: Scalar, spread: Spread) -> tuple[Attribute, list[Value]] | None:
+    """The values of its one attribute for which a condition is true, where all values are known; never NULL."""
+    read = refs(term)
+    if len(read) != 1 or volatile(term):
+        return None
+    (attribute,) = read
+    found = spread.get(attribute)
+    if found is None or not found.heavy or found.rest_distinct >= 0.5:
+        return None
+    try:
+        if found.null_share > 0 and _holds(term, attribute, None):
+            return None
+        return attribute, [value for value, _ in found.heavy if _holds(term, attribute, value)]
+    except NotApplied:
+        return None
+
+
 def _share(text: str, held: Sequence[float], null: float, rest: float, hits: int, found: Distribution) -> Share:
     pieces = [figure(share) for share in held] if len(held) <= 6 else [figure(sum(held))]
     value = sum(held) + null
