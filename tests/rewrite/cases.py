@@ -146,7 +146,10 @@ CASES: dict[str, tuple[list[str], list[tuple[str, str]]]] = {
     "distinct-to-group": (["select distinct a, b from t"], []),
     "group-to-distinct": (["select a, b from t group by a, b"], []),
     "count-distinct-to-count": (
-        ["select b, count(distinct a) as n from r group by b"],
+        [
+            "select b, count(distinct a) as n from r group by b",
+            "select b, count(distinct c) as n from (select distinct b, c from r) x group by b",
+        ],
         [("select b, count(distinct c) as n from r group by b", "values-are-different")],
     ),
     "drop-idle-aggregates": (["select b from (select b, count(*) as count from t group by b) x"], []),
