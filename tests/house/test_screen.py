@@ -54,3 +54,40 @@ def test_a_window_on_x11_lives_beside_the_process_that_lays_out_graphs(tmp_path:
     assert set(places) == {"join", "left", "right"}
     assert places["join"][1] > places["left"][1] == places["right"][1], "dot ranks the source above its targets"
     assert places["left"][0] != places["right"][0]
+
+
+# The whole window, closed as a person closes it; a failure to make X11's connection would end the process.
+SHEET = """
+import json, sys
+from app.window import Window, application
+
+made = application()
+window = Window(dark=False)
+window.show()
+for _ in range(20):
+    made.processEvents()
+picture = window.grab().toImage()
+colours = {picture.pixel(x, y) for x in range(0, picture.width(), 7) for y in range(0, picture.height(), 7)}
+seen = {"platform": made.platformName(), "visible": window.isVisible(), "colours": len(colours)}
+window.close()
+made.processEvents()
+print(json.dumps({**seen, "closed": not window.isVisible(), "pygraphviz here": "pygraphviz" in sys.modules}))
+"""
+
+
+def test_the_window_opens_and_closes_on_x11() -> None:
+    with virtual_screen() as environment:
+        done = subprocess.run(
+            [sys.executable, "-c", SHEET],
+            cwd=ROOT,
+            env=environment,
+            capture_output=True,
+            text=True,
+            check=False,
+            timeout=120,
+        )
+    assert done.returncode == 0, done.stderr
+    said = json.loads(done.stdout)
+    assert said["platform"] == "xcb" and said["visible"] and said["closed"]
+    assert said["colours"] > 3, "the window is blank"
+    assert not said["pygraphviz here"]
