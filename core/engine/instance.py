@@ -9,7 +9,7 @@ from decimal import Decimal
 from typing import Any
 
 from core.catalog.ddl import ddl_of, in_reference_order
-from core.catalog.model import Catalog, catalog_of
+from core.catalog.model import Catalog, RelationFacts, catalog_of
 from core.engine.duckdb_engine import DuckEngine, quoted
 
 Instance = Mapping[str, Sequence[tuple[Any, ...]]]
@@ -45,12 +45,35 @@ def instance_sql(catalog: Catalog, data: Instance) -> str:
 def _inserts(catalog: Catalog, data: Instance) -> list[str]:
     statements = []
     for facts in in_reference_order(catalog):
-        rows = data.get(facts.name.lower(), ())
-        if rows:
+        table = ".".join(quoted(part) if not part.isidentifier() else part for part in facts.name.split("."))
+        for rows in _batches(facts, data.get(facts.name.lower(), ())):
             listed = ",\n  ".join("(" + ", ".join(value_sql(value) for value in row) + ")" for row in rows)
-            table = ".".join(quoted(part) if not part.isidentifier() else part for part in facts.name.split("."))
             statements.append(f"INSERT INTO {table} VALUES\n  {listed};")
     return statements
+
+
+def _batches(facts: RelationFacts, rows: Sequence[tuple[Any, ...]]) -> list[Sequence[tuple[Any, ...]]]:
+    """The rows in the order they can be inserted. DuckDB looks for the row that a row of the same relation refers to
+    before the statement, so such rows come one by one, those referred to first."""
+    own = [key for key in facts.foreign_keys if key.relation.lower() == facts.name.lower()]
+    if not own or not rows:
+        return [rows] if rows else []
+    place = {a.name.lower(): i for i, a in enumerate(facts.attributes)}
+
+    def waits(row: tuple[Any, ...], left: list[tuple[Any, ...]]) -> bool:
+        for key in own:
+            wanted = tuple(row[place[n.lower()]] for n in key.attributes)
+            there = [tuple(other[place[n.lower()]] for n in key.target) for other in left if other is not row]
+            if None not in wanted and wanted in there:
+                return True
+        return False
+
+    left, ordered = list(rows), []
+    while left:
+        ready = next((row for row in left if not waits(row, left)), left[0])
+        left.remove(ready)
+        ordered.append([ready])
+    return list(ordered)
 
 
 def table_scripts(catalog: Catalog) -> list[str]:
