@@ -63,8 +63,10 @@ class Text:
 
     @property
     def left(self) -> float:
+        if self.anchor == "start":
+            return self.x
         own = width(self.text, self.face, self.size)
-        return self.x - {"start": 0.0, "middle": own / 2, "end": own}[self.anchor]
+        return self.x - (own / 2 if self.anchor == "middle" else own)
 
     @property
     def box(self) -> Box:
@@ -81,6 +83,7 @@ class DisplayList:
     """Items in order of painting, and the rectangle each owner (operator, callout) can be touched in."""
 
     items: list[Item] = field(default_factory=list)
+    _boxed: list[tuple[Item, Box]] = field(default_factory=list, init=False, repr=False, compare=False)
     boxes: dict[str, Box] = field(default_factory=dict)
     title: str = ""
     description: str = ""
@@ -92,20 +95,31 @@ class DisplayList:
         self.items.extend(moved(item, dx, dy) for item in other.items)
         self.boxes.update({k: (a + dx, b + dy, c + dx, d + dy) for k, (a, b, c, d) in other.boxes.items()})
 
+    def boxed(self) -> list[tuple[Item, Box]]:
+        """Every item with the rectangle it covers. Items are only ever added, so what is known of the others is kept."""
+        for item in self.items[len(self._boxed) :]:
+            self._boxed.append((item, box_of(item)))
+        return self._boxed
+
     def bounds(self) -> Box:
         """The rectangle that holds everything."""
-        return _hull(box_of(item) for item in self.items)
+        return _hull(box for _, box in self.boxed())
 
     def texts(self) -> list[Text]:
         return [item for item in self.items if isinstance(item, Text)]
 
 
 def moved(item: Item, dx: float, dy: float) -> Item:
-    from dataclasses import replace
-
-    if isinstance(item, (Line, Shape)):
-        return replace(item, points=tuple((x + dx, y + dy) for x, y in item.points))
-    return replace(item, x=item.x + dx, y=item.y + dy)
+    # Written out: `dataclasses.replace` takes most of the time that a large drawing needs.
+    match item:
+        case Line(points, role, weight, dash, owner, detail):
+            return Line(tuple([(x + dx, y + dy) for x, y in points]), role, weight, dash, owner, detail)
+        case Shape(points, fill, stroke, weight, owner):
+            return Shape(tuple([(x + dx, y + dy) for x, y in points]), fill, stroke, weight, owner)
+        case Circle(x, y, radius, stroke, fill, weight, owner):
+            return Circle(x + dx, y + dy, radius, stroke, fill, weight, owner)
+        case Text(x, y, text, face, size, role, anchor, owner, detail):
+            return Text(x + dx, y + dy, text, face, size, role, anchor, owner, detail)
 
 
 def box_of(item: Item) -> Box:

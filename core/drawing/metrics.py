@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import json
 from dataclasses import dataclass
-from functools import cache
+from functools import cache, lru_cache
 from pathlib import Path
 
 FONTS = Path(__file__).resolve().parents[2] / "assets" / "fonts"
@@ -28,7 +28,8 @@ def faces() -> dict[str, Face]:
     return {name: Face(f["em"], f["ascent"], f["descent"], f["widths"]) for name, f in found.items()}
 
 
-def runs(text: str, face: str) -> list[tuple[str, str]]:
+@lru_cache(maxsize=1 << 15)
+def runs(text: str, face: str) -> tuple[tuple[str, str], ...]:
     """The text cut into (face, text) so that each character stands in a face that has it."""
     known = faces()
     found: list[tuple[str, str]] = []
@@ -40,17 +41,22 @@ def runs(text: str, face: str) -> list[tuple[str, str]]:
             found[-1] = (chosen, found[-1][1] + character)
         else:
             found.append((chosen, character))
-    return found
+    return tuple(found)
 
 
 def width(text: str, face: str, size: float) -> float:
     """The width of a text in sheet units; a character that no face has counts as wide as an em dash."""
+    return _ems(text, face) * size
+
+
+@lru_cache(maxsize=1 << 15)
+def _ems(text: str, face: str) -> float:
     known = faces()
     total = 0.0
     for chosen, part in runs(text, face):
         font = known[chosen]
         total += sum(font.widths.get(character, font.em) for character in part) / font.em
-    return total * size
+    return total
 
 
 def cut(text: str, face: str, size: float, most: float) -> str:

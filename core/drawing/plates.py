@@ -158,12 +158,28 @@ def gauge_place(value: float, decades: int) -> float:
     return GAUGE * min(1.0, math.log10(max(1.0, value)) / max(1, decades))
 
 
+def evidence_word(size: Size) -> str:
+    """The evidence under a number; "exact" where structure alone leaves no other number, though nothing was counted."""
+    if size.measured is None and size.high is not None and size.low == size.high:
+        return "exact"
+    return size.best_evidence.word
+
+
+def tick_step(decades: int) -> int:
+    """How many decades from tick to tick, so that ticks stay apart on a scale of any length."""
+    step = 1
+    while decades / step > 18:
+        step *= 3
+    return step
+
+
 def _gauge(out: DisplayList, size: Size, left: float, y: float, decades: int, role: str, own: str) -> None:
     """A strip of decades: I-beam for the guaranteed range, circle for the estimate, triangle for a measured count."""
     out.add(Line(((left, y), (left + GAUGE, y)), SOFT, 0.9, owner=own))
-    for i in range(decades + 1):
+    step = tick_step(decades)
+    for i in range(0, decades + 1, step):
         x = left + GAUGE * i / decades
-        out.add(Line(((x, y), (x, y + (5 if i % 3 == 0 else 3))), SOFT, 0.8, owner=own))
+        out.add(Line(((x, y), (x, y + (5 if i % (3 * step) == 0 else 3))), SOFT, 0.8, owner=own, detail=True))
     low = left + gauge_place(size.low, decades)
     open_end = size.high is None or size.high > 10**decades
     high = left + GAUGE + 3 if open_end or size.high is None else left + gauge_place(size.high, decades)
@@ -179,7 +195,7 @@ def _gauge(out: DisplayList, size: Size, left: float, y: float, decades: int, ro
     if size.measured is not None:
         x = left + gauge_place(size.measured, decades)
         out.add(Shape(((x, y + 1.5), (x - 4.5, y + 9.5), (x + 4.5, y + 9.5)), role, owner=own))
-    number, word = rows_text(size.best), size.best_evidence.word
+    number, word = rows_text(size.best), evidence_word(size)
     out.add(Text(left + GAUGE + 9, y + 2, number, "sans-bold", 12, role, owner=own))
     out.add(Text(left + GAUGE + 9, y + 14, word, "sans", 9.5, SOFT, owner=own, detail=True))
 
