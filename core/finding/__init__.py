@@ -16,11 +16,13 @@ from core.finding import (
     hidden_predicate,
     idle_distinct,
     idle_sort,
+    key_types,
     late_predicate,
     multiplied_sum,
     no_evidence,
     null_trap,
     product,
+    range_join,
     same_work,
     undone_outer_join,
 )
@@ -44,6 +46,8 @@ KINDS: tuple[Callable[[View], Iterator[Finding]], ...] = (
     idle_distinct.find,
     count_of_null.find,
     multiplied_sum.find,
+    range_join.find,
+    key_types.find,
     no_evidence.find,
 )
 
