@@ -19,6 +19,9 @@ from core.drawing.tidy import Node, lay_out
 from core.size import Size
 
 
+_FIRST_BALLOON, _BALLOON = 44.0, 26.0
+
+
 @dataclass(frozen=True, slots=True)
 class Balloon:
     """A numbered callout at an operator."""
@@ -71,6 +74,7 @@ def draw_plan(
     graph = _draw_graph(formulation, sizes, catalog, prefix, decades, shown, naming)
     if graph is not None:
         return graph
+    room = _balloon_room(shown.balloons)
     plates: dict[str, Plate] = {}
     operators: dict[str, Operator] = {}
     owners: dict[Operator, str] = {}
@@ -85,7 +89,8 @@ def draw_plan(
         plates[owner] = _reference(operator, owner, formulation) if again else _plate(operator, owner, formulation, sizes, catalog, naming, shown)
         operators[owner] = operator
         owners.setdefault(operator, owner)
-        nodes[owner] = Node(ANCHOR, max(10.0, plates[owner].width - ANCHOR), plates[owner].height)
+        after = max(10.0, plates[owner].width - ANCHOR) + (0.0 if again else room.get(operator, 0.0))
+        nodes[owner] = Node(ANCHOR, after, plates[owner].height)
         if above:
             edges.append((above, owner))
             nodes[above].children.append(nodes[owner])
@@ -128,7 +133,8 @@ def _draw_graph(
     owners = {operator: f"{prefix}{i + 1}" for i, operator in enumerate(operators)}
     plates = {o: _plate(op, o, formulation, sizes, catalog, naming, shown) for op, o in owners.items()}
     edges = [(owners[op], owners[below]) for op in operators for below in inputs(op)]
-    placed = place({o: (round(p.width, 1), p.height + 8) for o, p in plates.items()}, edges)
+    room = {owners[op]: wide for op, wide in _balloon_room(shown.balloons).items() if op in owners}
+    placed = place({o: (round(p.width + room.get(o, 0.0), 1), p.height + 8) for o, p in plates.items()}, edges)
     if placed is None:
         return None
     out = DisplayList()
@@ -139,7 +145,7 @@ def _draw_graph(
         out.add(Line(tuple(corners), ACCENT if accent else SOFT if soft else INK, 1.8 if accent else 1.2))
     for owner, plate in plates.items():
         x, y = placed.nodes[owner]
-        out.extend(draw_plate(plate, x - plate.width / 2, y - plate.height / 2, decades))
+        out.extend(draw_plate(plate, x - (plate.width + room.get(owner, 0.0)) / 2, y - plate.height / 2, decades))
     _balloons(out, shown.balloons, owners)
     return PlanDrawing(out, by_owner, owners)
 
@@ -231,6 +237,14 @@ def _edges(
             out.add(Line(points, role, 1.8 if role == ACCENT else 1.2))
 
 
+def _balloon_room(balloons: Sequence[Balloon]) -> dict[Operator, float]:
+    """How much wider a plate's place must be for the balloons at its right."""
+    room: dict[Operator, float] = {}
+    for balloon in balloons:
+        room[balloon.operator] = room.get(balloon.operator, _FIRST_BALLOON - _BALLOON) + _BALLOON
+    return room
+
+
 def _balloons(out: DisplayList, balloons: Sequence[Balloon], owners: Mapping[Operator, str]) -> None:
     """Numbered circles right of their plates, with a leader to the plate; several at one plate stand in a row."""
     beside: dict[str, int] = {}
@@ -241,10 +255,10 @@ def _balloons(out: DisplayList, balloons: Sequence[Balloon], owners: Mapping[Ope
         _, top, right, _ = out.boxes[owner]
         place = beside.get(owner, 0)
         beside[owner] = place + 1
-        x, y = right + 22 + 26 * place, top - 6
+        x, y = right + _FIRST_BALLOON - 12 + _BALLOON * place, top + 6
         if place == 0:
-            out.add(Line(((right - 4, top + 12), (x - 9, y + 4.5)), ACCENT, 1.1, owner=f"callout{balloon.number}"))
-            out.add(Circle(right - 4, top + 12, 1.8, ACCENT, ACCENT, 1.0))
+            out.add(Line(((right - 4, top + 14), (x - 9.6, y + 2.8)), ACCENT, 1.1, owner=f"callout{balloon.number}"))
+            out.add(Circle(right - 4, top + 14, 1.8, ACCENT, ACCENT, 1.0))
         out.add(Circle(x, y, 10, ACCENT, "paper", 1.3, f"callout{balloon.number}"))
         out.add(Text(x, y + 4, str(balloon.number), "sans-bold", 11, ACCENT, "middle", f"callout{balloon.number}"))
         out.boxes[f"callout{balloon.number}"] = (x - 10, y - 10, x + 10, y + 10)

@@ -20,8 +20,9 @@ ANCHOR = 74.0
 """Where edges meet a plate, from its left."""
 WIDEST = 300.0
 _TEXT_LEFT = 42.0
-_HEIGHT = 66.0
-_NOTED = 80.0
+_SIGN = 22.0
+_HEIGHT = 68.0
+_NOTED = 81.0
 
 
 @dataclass(frozen=True, slots=True)
@@ -122,11 +123,11 @@ def draw_plate(plate: Plate, left: float, top: float, decades: int) -> DisplayLi
 
 def _sign(out: DisplayList, plate: Plate, left: float, top: float, role: str) -> None:
     if plate.sign == "fix":
-        out.add(Text(left + 9, top + 22, "fix", "serif-italic", 15, role, owner=plate.owner))
+        out.add(Text(left + 9, top + 20, "fix", "serif-italic", 15, role, owner=plate.owner))
         return
-    out.add(Text(left + 10, top + 23, plate.sign, "serif", 21, role, owner=plate.owner))
+    out.add(Text(left + 10, top + 21, plate.sign, "serif", _SIGN, role, owner=plate.owner))
     if plate.mark:
-        out.add(Text(left + 11 + width(plate.sign, "serif", 21), top + 26, plate.mark, "sans", 7.5, role, owner=plate.owner))
+        out.add(Text(left + 11 + width(plate.sign, "serif", _SIGN), top + 25, plate.mark, "sans-bold", 9, role, owner=plate.owner))
 
 
 def _relation(out: DisplayList, plate: Plate, left: float, top: float, role: str) -> None:
