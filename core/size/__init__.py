@@ -14,7 +14,7 @@ from core.catalog.model import Catalog
 from core.derive.facts import Facts
 from core.size.estimate import estimate, width_of
 from core.size.guarantee import Bounds, bounds
-from core.size.model import Estimate, Line, Size
+from core.size.model import Estimate, Line, Size, as_float, figure
 
 __all__ = ["Line", "Size", "size"]
 
@@ -27,7 +27,8 @@ def size(
 ) -> dict[Operator, Size]:
     """The size of every operator of a formulation (or of a graph).
 
-    In a correlated part a size is for one outer row. `measured` are exact counts by operator, from `core.engine.measure`.
+    In a correlated part a size is for one outer row. `measured` are exact counts by operator, from
+    `core.engine.measure`.
     """
     known = facts if facts is not None else Facts(catalog)
     roots = query.roots() if isinstance(query, Formulation) else (query,)
@@ -58,14 +59,17 @@ def size(
 
 def _clamped(found: Estimate, limits: Bounds) -> tuple[Estimate, Line | None]:
     """An estimate never leaves its guaranteed range."""
-    if found.rows < limits.low:
-        line = Line("no fewer than is guaranteed", f"max({found.rows:.6g}, {limits.low})", float(limits.low), found.evidence, limits.reason)
-        return replace(found, rows=float(limits.low)), line
-    if limits.high is not None and found.rows > limits.high:
-        line = Line("no more than is guaranteed", f"min({found.rows:.6g}, {limits.high})", float(limits.high), found.evidence, limits.reason)
-        return replace(found, rows=float(limits.high)), line
+    low = as_float(limits.low)
+    if found.rows < low:
+        formula = f"max({figure(found.rows)}, {figure(low)})"
+        line = Line("no fewer than is guaranteed", formula, low, found.evidence, limits.reason)
+        return replace(found, rows=low), line
+    high = None if limits.high is None else as_float(limits.high)
+    if high is not None and found.rows > high:
+        formula = f"min({figure(found.rows)}, {figure(high)})"
+        line = Line("no more than is guaranteed", formula, high, found.evidence, limits.reason)
+        return replace(found, rows=high), line
     return found, None
-
 
 
 class _Room(ModuleType):

@@ -58,7 +58,9 @@ def computed(value: Scalar, spread: Spread, rows: float) -> Distribution:
     for found in read:
         present *= 1 - found.null_share
     strict = isinstance(value, (Arithmetic, Negative, Cast)) or (isinstance(value, Call) and value.name in STRICT)
-    evidence = min((found.evidence for found in read), default=Evidence.ASSUMED) if bound is not None else Evidence.ASSUMED
+    evidence = (
+        min((found.evidence for found in read), default=Evidence.ASSUMED) if bound is not None else Evidence.ASSUMED
+    )
     nulls = 1 - present if strict and evidence > Evidence.ASSUMED else 0.0
     distinct = max(1.0, min(most, max(1.0, rows)))
     return Distribution(distinct, null_share=nulls, width=width, evidence=evidence)
@@ -120,5 +122,3 @@ def _years(found: Distribution) -> float | None:
     if found.low is None or found.high is None or not 1 <= found.low <= found.high <= date.max.toordinal():
         return None
     return float(date.fromordinal(int(found.high)).year - date.fromordinal(int(found.low)).year + 1)
-
-

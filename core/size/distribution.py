@@ -5,6 +5,7 @@ from __future__ import annotations
 from bisect import bisect_left, bisect_right
 from collections.abc import Sequence
 from dataclasses import dataclass, replace
+from itertools import pairwise
 
 from core.algebra.operators import Relation
 from core.algebra.types import Family, Type, assumed_bytes
@@ -197,7 +198,7 @@ def moments(found: Distribution) -> tuple[float, float] | None:
                 return None
             bounds = (found.low, found.high)
         each = found.rest_share / (len(bounds) - 1)
-        pieces.extend((each, a, b) for a, b in zip(bounds, bounds[1:], strict=False))
+        pieces.extend((each, a, b) for a, b in pairwise(bounds))
     total = sum(share for share, _, _ in pieces)
     if total <= 0:
         return None

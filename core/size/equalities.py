@@ -14,7 +14,7 @@ from core.algebra.scalars import Attribute
 from core.algebra.types import Family
 from core.catalog.model import Evidence, RelationFacts, Value
 from core.size.distribution import Distribution
-from core.size.model import Line, figure
+from core.size.model import Line, figure, product_text
 from core.size.values import same_value
 
 Spread = Mapping[Attribute, Distribution]
@@ -81,7 +81,9 @@ def meeting(left: Distribution, right: Distribution) -> Meeting:
     values_right = max(0.0, right.values - len(shared)) * inside_right
     if min(values_left, values_right) < 0.5 or rest_left < 1e-12 or rest_right < 1e-12:
         return Meeting(tuple(shared), 0.0, 0.0, 1.0)
-    return Meeting(tuple(shared), rest_left * inside_left, rest_right * inside_right, max(1.0, values_left, values_right))
+    return Meeting(
+        tuple(shared), rest_left * inside_left, rest_right * inside_right, max(1.0, values_left, values_right)
+    )
 
 
 def _overlap(left: Distribution, right: Distribution) -> tuple[float, float]:
@@ -151,7 +153,7 @@ def joined(left: Distribution, right: Distribution) -> tuple[Distribution, Distr
     return narrowed(left, right), narrowed(right, left)
 
 
-# --- several equalities together ---------------------------------------------------------------------------------------
+# --- several equalities together -------------------------------------------------------------------------------------
 
 
 class _Classes:
@@ -177,7 +179,7 @@ class _Classes:
 def equality_share(pairs: Sequence[Pair], spread: Spread) -> Share:
     """The share of rows in which all the pairs are equal."""
     united, lines, value, level = _Classes(), [], 1.0, Evidence.MEASURED
-    factors: list[str] = []
+    factors: list[float] = []
     for line, covered in _composites(pairs, spread):
         for a, b in covered:
             united.unite(a, b)
@@ -188,9 +190,9 @@ def equality_share(pairs: Sequence[Pair], spread: Spread) -> Share:
     for line in lines:
         value *= line.value
         level = min(level, line.evidence)
-        factors.append(figure(line.value))
+        factors.append(line.value)
     if len(lines) > 1:
-        lines.append(Line("the equalities together, taken as independent", " × ".join(factors), value, level))
+        lines.append(Line("the equalities together, taken as independent", product_text(factors), value, level))
     return Share(value, tuple(lines), level)
 
 

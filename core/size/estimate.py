@@ -39,7 +39,7 @@ from core.size.computed import computed
 from core.size.distribution import Distribution, Origin, base_distribution, thinned
 from core.size.grouping import group, grouped
 from core.size.joins import join
-from core.size.model import Estimate, Line, figure
+from core.size.model import Estimate, Line, figure, sum_text
 from core.size.restrict import restricted
 from core.size.selectivity import RANGE_GUESS, share_of
 
@@ -49,9 +49,7 @@ ASSUMED_ROWS = 1000.0
 Spread = dict[Attribute, Distribution]
 
 
-def estimate(
-    operator: Operator, below: list[Estimate], facts: Facts, known: Mapping[Operator, Estimate]
-) -> Estimate:
+def estimate(operator: Operator, below: list[Estimate], facts: Facts, known: Mapping[Operator, Estimate]) -> Estimate:
     """The estimate of an operator from those of its inputs. In a correlated part it is for one outer row.
 
     `known` holds the estimates of everything below.
@@ -61,9 +59,16 @@ def estimate(
             return _relation(operator, facts.catalog)
         case Values(rows=rows):
             count = float(len(rows))
-            return Estimate(count, _fresh_spread(operator, count), Evidence.MEASURED, (_line("rows written out", figure(count), count),))
+            return Estimate(
+                count,
+                _fresh_spread(operator, count),
+                Evidence.MEASURED,
+                (_line("rows written out", figure(count), count),),
+            )
         case TableFunction() | Recurrence():
-            line = Line(f"rows of a {name_of(operator)}: nothing is known", figure(ASSUMED_ROWS), ASSUMED_ROWS, Evidence.ASSUMED)
+            line = Line(
+                f"rows of a {name_of(operator)}: nothing is known", figure(ASSUMED_ROWS), ASSUMED_ROWS, Evidence.ASSUMED
+            )
             return Estimate(ASSUMED_ROWS, _fresh_spread(operator, ASSUMED_ROWS), Evidence.ASSUMED, (line,))
         case Select(condition=condition):
             return _selected(below[0], condition)
@@ -82,7 +87,10 @@ def estimate(
         case Divide():
             return _divide(operator, below)
         case Window():
-            spread = {**below[0].spread, **_fresh_spread(operator, below[0].rows, only=tuple(c.attribute for c in operator.columns))}
+            spread = {
+                **below[0].spread,
+                **_fresh_spread(operator, below[0].rows, only=tuple(c.attribute for c in operator.columns)),
+            }
             return Estimate(below[0].rows, spread, below[0].evidence, (_same(below[0]),))
         case Sort():
             return replace(below[0], lines=(_same(below[0]),))
@@ -113,7 +121,10 @@ def _relation(operator: Relation, catalog: Catalog) -> Estimate:
     if facts is None or facts.rows is None:
         text = f"{operator.name}: no row count in the catalog"
         line = Line(text, figure(ASSUMED_ROWS), ASSUMED_ROWS, Evidence.ASSUMED)
-        spread = {a: base_distribution(None if facts is None else facts.attribute(a.name), a.type, ASSUMED_ROWS) for a in operator.attributes}
+        spread = {
+            a: base_distribution(None if facts is None else facts.attribute(a.name), a.type, ASSUMED_ROWS)
+            for a in operator.attributes
+        }
         return Estimate(ASSUMED_ROWS, spread, Evidence.ASSUMED, (line,))
     rows = float(facts.rows)
     when = f", {facts.as_of.isoformat()}" if facts.as_of is not None else ""
@@ -149,10 +160,12 @@ def _set_operation(operator: SetOperation, below: list[Estimate]) -> Estimate:
         own = [part.spread[source[i]] for part, source in zip(below, operator.sources, strict=True)]
         total = max(1e-9, sum(part.rows for part in below))
         nulls = sum(d.null_share * part.rows for d, part in zip(own, below, strict=True)) / total
-        spread[attribute] = Distribution(max(d.distinct for d in own), nulls, width=max(d.width for d in own), evidence=min(d.evidence for d in own))
+        spread[attribute] = Distribution(
+            max(d.distinct for d in own), nulls, width=max(d.width for d in own), evidence=min(d.evidence for d in own)
+        )
     rows = [part.rows for part in below]
     if operator.kind is SetKind.UNION:
-        value, formula = sum(rows), " + ".join(figure(r) for r in rows)
+        value, formula = sum(rows), sum_text(rows)
         lines: tuple[Line, ...] = (Line("the inputs' rows together", formula, value, evidence),)
         if operator.distinct:
             merged = Estimate(value, spread, evidence)
@@ -160,7 +173,11 @@ def _set_operation(operator: SetOperation, below: list[Estimate]) -> Estimate:
             return replace(whole, lines=(*lines, *whole.lines))
     elif operator.kind is SetKind.INTERSECT:
         value = min(rows) / 2
-        lines = (Line("half of the smaller input", f"min({', '.join(figure(r) for r in rows)}) ÷ 2", value, Evidence.ASSUMED),)
+        lines = (
+            Line(
+                "half of the smaller input", f"min({', '.join(figure(r) for r in rows)}) ÷ 2", value, Evidence.ASSUMED
+            ),
+        )
     else:
         value = rows[0] / 2
         lines = (Line("half of the left input", f"{figure(rows[0])} ÷ 2", value, Evidence.ASSUMED),)
@@ -182,7 +199,11 @@ def _limit(operator: Limit, below: Estimate) -> Estimate:
     count, offset = _whole_number(operator.count), _whole_number(operator.offset) or 0
     after = max(0.0, below.rows - offset)
     if operator.count is None or count is None:
-        return replace(below, rows=after, lines=(Line("rows after the offset", f"max(0, {figure(below.rows)} - {offset})", after, below.evidence),))
+        return replace(
+            below,
+            rows=after,
+            lines=(Line("rows after the offset", f"max(0, {figure(below.rows)} - {offset})", after, below.evidence),),
+        )
     rows = min(float(count), after)
     formula = f"min({count}, {figure(after)})"
     share = rows / max(below.rows, 1e-9)
@@ -211,4 +232,3 @@ def width_of(found: Estimate, operator: Operator) -> float:
         width = float(assumed_bytes(attribute.type)) if spread is None else spread.width * (1 - spread.null_share)
         total += width
     return total
-

@@ -12,7 +12,7 @@ from core.algebra.types import NUMERIC, assumed_bytes
 from core.catalog.model import Evidence
 from core.derive.facts import Facts, closure
 from core.size.distribution import Distribution, groups, moments
-from core.size.model import Estimate, Line, figure
+from core.size.model import Estimate, Line, figure, product_text, sum_text
 
 _MOST = 1e15
 
@@ -20,15 +20,18 @@ _MOST = 1e15
 def grouped(operator: Operator, keys: Sequence[Attribute], below: Estimate, facts: Facts | None = None) -> Estimate:
     """The distinct combinations of the keys, and what is known of each attribute after grouping by them."""
     essential, cap = _essential(operator, keys, below, facts)
-    combinations, evidence, pieces = 1.0, below.evidence, []
+    combinations, evidence = 1.0, below.evidence
+    counts: list[float] = []
     for key in essential:
         count = _values(below.spread[key])
         combinations = min(combinations * count, _MOST)
         evidence = min(evidence, below.spread[key].evidence)
-        pieces.append(figure(count))
-    text, formula = "combinations of key values", " × ".join(pieces) or "1"
+        counts.append(count)
+    text, formula = "combinations of key values", product_text(counts) or "1"
     if len(essential) < len(keys):
-        text += f" ({', '.join(a.name for a in essential)} determine the others)" if essential else " (all are constant)"
+        text += (
+            f" ({', '.join(a.name for a in essential)} determine the others)" if essential else " (all are constant)"
+        )
     if combinations >= _MOST:
         formula = f"min({figure(_MOST)}, {formula})"
     product = Line(text, formula, combinations, evidence)
@@ -117,9 +120,7 @@ def group(operator: Group, below: Estimate, facts: Facts) -> Estimate:
     return replace(found, spread=spread)
 
 
-def _grouping_sets(
-    operator: Group, sets: tuple[tuple[Attribute, ...], ...], below: Estimate, facts: Facts
-) -> Estimate:
+def _grouping_sets(operator: Group, sets: tuple[tuple[Attribute, ...], ...], below: Estimate, facts: Facts) -> Estimate:
     parts = [grouped(operator, part, below, facts) if part else None for part in sets]
     counts = [1.0 if part is None else part.rows for part in parts]
     rows = sum(counts)
@@ -129,8 +130,10 @@ def _grouping_sets(
         # NULL stands for all values in the rows of the sets that lack a key.
         lacking = sum(count for part, count in zip(sets, counts, strict=True) if key not in part)
         found = below.spread[key]
-        spread[key] = replace(found, heavy=(), null_share=min(1.0, lacking / max(rows, 1e-9)), evidence=Evidence.ASSUMED)
-    line = Line("groups of every grouping set", " + ".join(figure(count) for count in counts), rows, evidence)
+        spread[key] = replace(
+            found, heavy=(), null_share=min(1.0, lacking / max(rows, 1e-9)), evidence=Evidence.ASSUMED
+        )
+    line = Line("groups of every grouping set", sum_text(counts), rows, evidence)
     return Estimate(rows, spread, evidence, (line,))
 
 

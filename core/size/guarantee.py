@@ -1,7 +1,7 @@
 """Guaranteed ranges: bounds on rows that hold for every data set with the catalog's exact facts.
 
-Row counts, keys, foreign keys over attributes that are never NULL, the largest number of rows a value has (degrees: Cai,
-Balazinska, Suciu, SIGMOD 2019), distinct counts, limits.
+Row counts, keys, foreign keys over attributes that are never NULL, the largest number of rows a value has (degrees:
+Cai, Balazinska, Suciu, SIGMOD 2019), distinct counts, limits.
 """
 
 from __future__ import annotations
@@ -138,7 +138,8 @@ def _own(operator: Operator, below: list[Bounds], facts: Facts) -> Bounds:
         case Unnest(keep_empty=keep):
             return Bounds(below[0].low if keep else 0, None, reason="lists of unknown length")
         case Fixpoint():
-            return Bounds(below[0].low if not operator.distinct else min(1, below[0].low), None, reason="it may grow without bound")
+            low = min(1, below[0].low) if operator.distinct else below[0].low
+            return Bounds(low, None, reason="it may grow without bound")
 
 
 def _relation(operator: Relation, catalog: Catalog) -> Bounds:
@@ -229,7 +230,9 @@ def _join(operator: Join, left: Bounds, right: Bounds, facts: Facts) -> Bounds:
     return Bounds(max(inner.low, left.low, right.low), high, {}, padded, reason)
 
 
-def _kept(side: Bounds, other: Bounds, partners: int | None, back: int | None) -> tuple[int | None, dict[Attribute, int]]:
+def _kept(
+    side: Bounds, other: Bounds, partners: int | None, back: int | None
+) -> tuple[int | None, dict[Attribute, int]]:
     """Rows of a join that keeps one side: each of its rows comes once, or once for each partner."""
     most = None if partners is None else max(1, partners)
     high = least(times(side.high, most), plus((times(other.high, back), side.high)))
@@ -281,7 +284,7 @@ def _fixed(facts: Facts, operator: Operator) -> frozenset[Attribute]:
 
 
 def always_matched(operator: Join, facts: Facts) -> bool:
-    """Whether a declared foreign key gives every left row a partner: the right side is the whole relation referred to."""
+    """Whether a declared foreign key gives every left row a partner: the right side is all of the relation it names."""
     whole = _whole_relation(operator.right)
     if whole is None:
         return False

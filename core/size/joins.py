@@ -12,7 +12,7 @@ from core.catalog.model import Evidence
 from core.size.distribution import Distribution, padded, remaining_distinct, thinned
 from core.size.equalities import Share, equality_share, joined
 from core.size.guarantee import equalities
-from core.size.model import Estimate, Line, figure
+from core.size.model import MOST_ROWS, Estimate, Line, figure
 from core.size.selectivity import share_of
 
 Pairs = list[tuple[Attribute, Attribute]]
@@ -35,8 +35,10 @@ def join(operator: Join, left: Estimate, right: Estimate, known: Mapping[Operato
     kind = operator.kind
     if kind in (JoinKind.SEMI, JoinKind.ANTI, JoinKind.MARK, JoinKind.SINGLE):
         return _half_join(operator, left, right, pairs, value, evidence, lines, known)
-    rows = left.rows * right.rows * value
+    rows = min(MOST_ROWS, left.rows * right.rows * value)
     formula = " × ".join([figure(left.rows), figure(right.rows), *(figure(share.value) for share in shares)])
+    if rows >= MOST_ROWS:
+        formula = f"min({figure(MOST_ROWS)}, {formula})"
     text = "left rows × right rows" + (" × share of pairs kept" if shares else "")
     lines = (*lines, Line(text, formula, rows, evidence))
     found = Estimate(rows, _joined_spread(spread, pairs, rows), evidence, lines)
@@ -153,7 +155,9 @@ def _half_join(
     have, formula, method = _correlated(operator, left, right, known) or _matching(left, right, pairs, share)
     first = Line("share of left rows with a partner", formula, have, evidence, method)
     kept = have if operator.kind is JoinKind.SEMI else 1 - have
-    text = "left rows × share with a partner" if operator.kind is JoinKind.SEMI else "left rows × share without a partner"
+    text = (
+        "left rows × share with a partner" if operator.kind is JoinKind.SEMI else "left rows × share without a partner"
+    )
     shown = figure(kept) if operator.kind is JoinKind.SEMI else f"(1 - {figure(have)})"
     rows = left.rows * kept
     total = Line(text, f"{figure(left.rows)} × {shown}", rows, evidence)
@@ -188,7 +192,14 @@ def _outer(kind: JoinKind, inner: Estimate, left: Estimate, right: Estimate, pai
     floor = max(side[0].rows for side in sides)
     terms = " + ".join(figure(line.value) for line in [inner.lines[-1], *lines[len(inner.lines) :]])
     rows = max(rows, floor)
-    lines.append(Line("matched and unmatched rows, no fewer than the side kept", f"max({figure(floor)}, {terms})", rows, inner.evidence))
+    lines.append(
+        Line(
+            "matched and unmatched rows, no fewer than the side kept",
+            f"max({figure(floor)}, {terms})",
+            rows,
+            inner.evidence,
+        )
+    )
     return Estimate(rows, _outer_spread(inner, sides, rows), inner.evidence, tuple(lines))
 
 

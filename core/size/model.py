@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+import math
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 
 from core.algebra.scalars import Attribute
@@ -29,7 +30,7 @@ class Size:
     """Rows and bytes out of an operator.
 
     `rows` is the estimate. `low`..`high` is guaranteed for every data set that obeys the catalog's exact facts (`high`
-    None: nothing bounds it). `measured` is an exact count by an engine, where there is one. `bytes` is rows times width.
+    None: nothing bounds it). `measured` is an exact count by an engine, where there is one. `bytes` is rows × width.
     """
 
     rows: float
@@ -61,8 +62,37 @@ class Estimate:
     lines: tuple[Line, ...] = ()
 
 
+MOST_ROWS = 1e300
+"""Larger estimates are written as this: a product of a hundred relations has more rows than a float can count."""
+
+
+def as_float(rows: int) -> float:
+    """A count as a float, whatever its length."""
+    return float(min(rows, int(MOST_ROWS)))
+
+
 def figure(value: float) -> str:
     """A number as it stands in a derivation: enough digits to follow the arithmetic."""
     if value == int(value) and abs(value) < 1e15:
         return str(int(value))
     return f"{value:.6g}"
+
+
+_SHOWN = 12
+"""Figures that a line writes out: the rest of a long row of them is taken together."""
+
+
+def product_text(factors: Sequence[float]) -> str:
+    """Figures multiplied, as a line writes it."""
+    shown = [figure(factor) for factor in factors[:_SHOWN]]
+    if len(factors) > _SHOWN:
+        shown.append(figure(math.prod(factors[_SHOWN:])))
+    return " × ".join(shown)
+
+
+def sum_text(terms: Sequence[float]) -> str:
+    """Figures added, as a line writes it."""
+    shown = [figure(term) for term in terms[:_SHOWN]]
+    if len(terms) > _SHOWN:
+        shown.append(figure(sum(terms[_SHOWN:])))
+    return " + ".join(shown)

@@ -1,7 +1,8 @@
 """The share of rows for which a condition is true, and how it was found.
 
-Heavy hitters first, then the histogram, then the guesses of System R (Selinger et al., SIGMOD 1979), which are marked as
-assumed. Different attributes are taken as independent; bounds on one attribute are taken together.
+Heavy hitters first, then the histogram, then conditions tried on the values that are known, then the guesses of
+System R (Selinger et al., SIGMOD 1979), which are marked as assumed. Different attributes are taken as independent;
+conditions on one attribute are taken together.
 """
 
 from __future__ import annotations
@@ -24,13 +25,14 @@ from core.algebra.scalars import (
     Or,
     Ref,
     Scalar,
+    conjunction,
     conjuncts,
     refs,
 )
 from core.catalog.model import Evidence
 from core.size.distribution import Distribution
 from core.size.equalities import Share, Spread, equality_share, pair_line
-from core.size.model import Line, figure
+from core.size.model import Line, figure, product_text, sum_text
 from core.size.restrict import bound_of
 from core.size.tried import tried, unwrapped
 from core.size.values import constant, number
@@ -49,7 +51,10 @@ def share_of(condition: Scalar, spread: Spread) -> Share:
     terms = tuple(bound for term in conjuncts(condition) for bound in unwrapped(term))
     if not terms:
         return Share(1.0, (), Evidence.MEASURED)
-    parts = [*_ranges(terms, spread), *_equalities(terms, spread)]
+    parts = [*_together(terms, spread)]
+    taken = {id(term) for part in parts for term in part[0]}
+    left = tuple(term for term in terms if id(term) not in taken)
+    parts += [*_ranges(left, spread), *_equalities(left, spread)]
     taken = {id(term) for part in parts for term in part[0]}
     shares = [share for _, share in parts]
     shares += [_term(term, spread) for term in terms if id(term) not in taken]
@@ -64,7 +69,7 @@ def _product(shares: list[Share]) -> Share:
         value *= share.value
     evidence = min(share.evidence for share in shares)
     lines = tuple(line for share in shares for line in share.lines)
-    formula = " × ".join(figure(share.value) for share in shares)
+    formula = product_text([share.value for share in shares])
     both = Line("all conditions together, taken as independent", formula, value, evidence, "System R 1979")
     return Share(value, (*lines, both), evidence)
 
@@ -72,6 +77,22 @@ def _product(shares: list[Share]) -> Share:
 def _line(text: str, formula: str, value: float, evidence: Evidence, source: str = "") -> Share:
     value = min(1.0, max(0.0, value))
     return Share(value, (Line(f"share of rows with {text}", formula, value, evidence, source),), evidence)
+
+
+def _together(terms: tuple[Scalar, ...], spread: Spread) -> list[tuple[list[Scalar], Share]]:
+    """Terms on one attribute of which every value is known: no independence is needed between them."""
+    by_attribute: dict[Attribute, list[Scalar]] = {}
+    for term in terms:
+        read = refs(term)
+        if len(read) == 1:
+            by_attribute.setdefault(next(iter(read)), []).append(term)
+    found = []
+    for several in by_attribute.values():
+        whole = conjunction(several)
+        share = tried(whole, scalar_text(whole), spread, sample=False) if len(several) > 1 else None
+        if share is not None:
+            found.append((several, share))
+    return found
 
 
 def _equalities(terms: tuple[Scalar, ...], spread: Spread) -> list[tuple[list[Scalar], Share]]:
@@ -304,10 +325,7 @@ def _in_list(attribute: Attribute, items: tuple[Scalar, ...], text: str, spread:
         share = min(0.5, len(values) * EQUAL_GUESS)
         return _line(text, f"min(0.5, {len(values)} × {EQUAL_GUESS})", share, Evidence.ASSUMED, "System R 1979")
     shares = [found.share_of(value) for value in sorted(values, key=str) if value is not None]
-    formula = " + ".join(figure(share) for share in shares) or "0"
-    if len(shares) > 8:
-        formula = figure(sum(shares))
-    return _line(text, f"min(1, {formula})", sum(shares), found.evidence, _equal_source(found))
+    return _line(text, f"min(1, {sum_text(shares) or 0})", sum(shares), found.evidence, _equal_source(found))
 
 
 def _is_null(attribute: Attribute, text: str, spread: Spread) -> Share:
@@ -324,13 +342,15 @@ def _disjunction(terms: tuple[Scalar, ...], text: str, spread: Spread) -> Share:
     evidence = min(share.evidence for share in shares)
     if len(equal_only) == 1 and all(_is_equality(term) for term in terms):
         value = min(1.0, sum(share.value for share in shares))
-        formula = "min(1, " + " + ".join(figure(share.value) for share in shares) + ")"
+        formula = f"min(1, {sum_text([share.value for share in shares])})"
         total = Line(f"share of rows with {text}: the values exclude each other", formula, value, evidence)
         return Share(value, (*lines, total), evidence)
     rest = 1.0
     for share in shares:
         rest *= 1 - share.value
-    formula = "1 - " + " × ".join(f"(1 - {figure(share.value)})" for share in shares)
+    formula = f"1 - {product_text([1 - share.value for share in shares])}"
+    if len(shares) <= 6:
+        formula = "1 - " + " × ".join(f"(1 - {figure(share.value)})" for share in shares)
     total = Line(f"share of rows with {text}, taken as independent", formula, 1 - rest, evidence, "System R 1979")
     return Share(1 - rest, (*lines, total), evidence)
 

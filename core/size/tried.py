@@ -107,10 +107,18 @@ def unwrapped(term: Scalar) -> tuple[Scalar, ...]:
     value = constant(right)
     match left:
         case Cast(term=Ref(attribute=attribute), type=type_) if type_.family is Family.DATE:
-            if attribute.type.family is Family.TIMESTAMP and isinstance(value, date) and not isinstance(value, datetime):
+            if (
+                attribute.type.family is Family.TIMESTAMP
+                and isinstance(value, date)
+                and not isinstance(value, datetime)
+            ):
                 return _between(term, attribute, operator, value, value + timedelta(days=1))
         case Call(name="year", arguments=(Ref(attribute=attribute),)):
-            if attribute.type.family in (Family.DATE, Family.TIMESTAMP) and isinstance(value, int) and 1 <= value < 9999:
+            if (
+                attribute.type.family in (Family.DATE, Family.TIMESTAMP)
+                and isinstance(value, int)
+                and 1 <= value < 9999
+            ):
                 return _between(term, attribute, operator, date(value, 1, 1), date(value + 1, 1, 1))
         case _:
             pass
@@ -120,7 +128,7 @@ def unwrapped(term: Scalar) -> tuple[Scalar, ...]:
 def _between(
     term: Scalar, attribute: Attribute, operator: ComparisonOperator, first: date, after: date
 ) -> tuple[Scalar, ...]:
-    """What the comparison of a stretch of days says of the attribute: the stretch begins at `first`, ends before `after`."""
+    """Bounds on the attribute from a comparison with a stretch of days, from `first` to before `after`."""
 
     def bound(sign: ComparisonOperator, day: date) -> Scalar:
         return Comparison(sign, Ref(attribute), Literal(day.isoformat(), DATE))

@@ -124,7 +124,9 @@ def number(value: Value | None) -> float | None:
         case int() | float() | Decimal():
             return float(value)
         case datetime():
-            return value.replace(tzinfo=None).toordinal() + (value.hour * 3600 + value.minute * 60 + value.second) / 86400
+            return (
+                value.replace(tzinfo=None).toordinal() + (value.hour * 3600 + value.minute * 60 + value.second) / 86400
+            )
         case date():
             return float(value.toordinal())
         case time():

@@ -1,4 +1,4 @@
-"""Derived facts held against rows: every operator of a query is run, and each claim is looked for a row that breaks it."""
+"""Derived facts held against rows: every operator of a query is run, each claim checked on its rows."""
 
 from __future__ import annotations
 
