@@ -97,7 +97,8 @@ CASES = [
     ),
     # Ranges that part: nobody.
     (
-        "select 1 from (select * from visits where id < 9) v join (select * from people where id > 9) p on v.id = p.id",
+        "select 1 from (select * from visits where id < 9) v "
+        "join (select * from people where id > 12) p on v.id = p.id",
         0,
     ),
     # 800 of the 1000 people are visited, however many are asked for.
