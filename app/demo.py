@@ -5,7 +5,12 @@ from __future__ import annotations
 import argparse
 import os
 import sys
+from collections.abc import Callable, Mapping
 from pathlib import Path
+
+from core.algebra.operators import Operator
+from core.size import Size
+from core.size.numbers import rows_text
 
 
 def has_screen() -> bool:
@@ -18,8 +23,12 @@ def has_screen() -> bool:
 
 
 def main(arguments: list[str] | None = None) -> int:
-    parser = argparse.ArgumentParser(prog="planimeter-demo", description="Opens the demo sheet, or draws it where there is no screen.")
-    parser.add_argument("--scale", type=float, default=1.0, help="how much data the demo has (1: about half a million rows)")
+    parser = argparse.ArgumentParser(
+        prog="planimeter-demo", description="Opens the demo sheet, or draws it where there is no screen."
+    )
+    parser.add_argument(
+        "--scale", type=float, default=1.0, help="how much data the demo has (1: about half a million rows)"
+    )
     parser.add_argument("--out", type=Path, default=Path("build"), help="where the drawings go when there is no screen")
     asked = parser.parse_args(arguments)
     if has_screen():
@@ -46,7 +55,6 @@ def draw(scale: float, out: Path) -> int:
     from core.engine.measure import measure
     from core.rewrite.improve import improve
     from core.sheet import edit
-    from core.size.numbers import rows_text
 
     print("No screen: the demo sheet is drawn to files.\n")
     application()
@@ -71,11 +79,7 @@ def draw(scale: float, out: Path) -> int:
         assert draft.formulation is not None
         sizes = bench.sizes(draft.formulation)
 
-        def facts(operator: object) -> str:
-            size = sizes[operator]  # type: ignore[index]
-            return f"[{rows_text(size.best)} rows, {size.best_evidence.word}; estimate {rows_text(size.rows)}]"
-
-        print(f"{draft.name}  {draft.subtitle}\n{tree_text(draft.formulation.root, facts=facts)}\n")
+        print(f"{draft.name}  {draft.subtitle}\n{tree_text(draft.formulation.root, facts=_facts(sizes))}\n")
     print("Findings")
     for number, letter, _, text in bench.callouts():
         print(f"  {number}  {letter}  {text}")
@@ -85,11 +89,26 @@ def draw(scale: float, out: Path) -> int:
     print(f"\nVerdict: {verdict.sentence}\n")
     out.mkdir(parents=True, exist_ok=True)
     page = bench.page()
-    for name, palette in (("demo.svg", "print"), ("demo.png", "light"), ("demo-dark.png", "dark"), ("demo.pdf", "print")):
+    for name, palette in (
+        ("demo.svg", "print"),
+        ("demo.png", "light"),
+        ("demo-dark.png", "dark"),
+        ("demo.pdf", "print"),
+    ):
         export(page, PALETTES[palette], out / name, bench.payload())
         print(f"drawn: {out / name}")
     print(f"\n{CAUTION}")
     return 0
+
+
+def _facts(sizes: Mapping[Operator, Size]) -> Callable[[Operator], str]:
+    """What is printed beside an operator of the tree."""
+
+    def text(operator: Operator) -> str:
+        size = sizes[operator]
+        return f"[{rows_text(size.best)} rows, {size.best_evidence.word}; estimate {rows_text(size.rows)}]"
+
+    return text
 
 
 if __name__ == "__main__":

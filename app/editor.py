@@ -118,7 +118,9 @@ class Editor(QWidget):
         self.field.setReadOnly(rewritten)
         self.head.setText(f"{draft.name}  ·  {draft.subtitle}" + ("  ·  written by Planimeter" if rewritten else ""))
         self._show_problems(() if rewritten else draft.problems)
-        notes = draft.formulation.notes if draft.formulation is not None and not draft.problems and not rewritten else ()
+        notes = (
+            draft.formulation.notes if draft.formulation is not None and not draft.problems and not rewritten else ()
+        )
         self.notes.setText("\n".join(notes))
         self.notes.setVisible(bool(notes))
         self.mark_selection()
@@ -141,7 +143,9 @@ class Editor(QWidget):
             if problem.span is not None:
                 row, column = position(text, problem.span.start)
                 where = f"{row}:{column}  "
-            extra = "".join(f"\n    {note}" for note in problem.notes) + (f"\n    {problem.help}" if problem.help else "")
+            extra = "".join(f"\n    {note}" for note in problem.notes) + (
+                f"\n    {problem.help}" if problem.help else ""
+            )
             lines.append(f"{where}{problem.message}{extra}")
         self.problem.setText("\n".join(lines))
         self.problem.setVisible(bool(lines))
@@ -159,7 +163,9 @@ class Editor(QWidget):
                 marks.append(self._mark(span.start, span.end, QColor(self.colours_of["wash"]), None))
             for problem in draft.problems:
                 if problem.span is not None:
-                    marks.append(self._mark(problem.span.start, problem.span.end, None, QColor(self.colours_of["accent"])))
+                    marks.append(
+                        self._mark(problem.span.start, problem.span.end, None, QColor(self.colours_of["accent"]))
+                    )
         self.field.setExtraSelections(marks)
 
     def _mark(self, start: int, end: int, fill: QColor | None, wave: QColor | None) -> QTextEdit.ExtraSelection:

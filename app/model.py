@@ -13,9 +13,9 @@ from core.algebra.scalars import refs
 from core.catalog.model import Catalog
 from core.compare.align import Alignment, align
 from core.derive.facts import Facts
+from core.drawing.display import DisplayList
 from core.drawing.page import Column, Dimension, Page, draw_columns, draw_page
 from core.drawing.plan import Balloon, PlanDrawing, PlanView, decades_for, draw_plan
-from core.drawing.display import DisplayList
 from core.finding import Finding, findings
 from core.language.sql.write import write_sql
 from core.rewrite import Offer, Refusal, rewrites
@@ -259,14 +259,14 @@ class Workbench(QObject):
                 selected=self.selection if selection and draft.letter == self.active else None,
                 balloons=mine,
             )
-            plan = draw_plan(draft.formulation, self.sizes(draft.formulation), self.sheet.catalog, draft.letter, decades, view)
+            plan = draw_plan(
+                draft.formulation, self.sizes(draft.formulation), self.sheet.catalog, draft.letter, decades, view
+            )
             columns.append(Column(draft.letter, draft.subtitle, plan.display))
             _remember(drawn, draft, plan)
         return columns, self._dimensions(alignment, drawn, everything), drawn
 
-    def _dimensions(
-        self, alignment: Alignment | None, drawn: Drawn, sizes: dict[Operator, Size]
-    ) -> list[Dimension]:
+    def _dimensions(self, alignment: Alignment | None, drawn: Drawn, sizes: dict[Operator, Size]) -> list[Dimension]:
         """The matched operators whose rows differ most."""
         if alignment is None:
             return []
@@ -306,7 +306,9 @@ class Workbench(QObject):
             return []
         rows = []
         for i in range(1, draft.current + 1):
-            before, after = (total_rows(r.formulation, self.sizes(r.formulation)) for r in draft.revisions[i - 1 : i + 1])
+            before, after = (
+                total_rows(r.formulation, self.sizes(r.formulation)) for r in draft.revisions[i - 1 : i + 1]
+            )
             revision = draft.revisions[i]
             rows.append((f"{draft.letter}{i}", f"{revision.title}: {revision.what}", ratio_text(before, after)))
         return rows

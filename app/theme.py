@@ -2,8 +2,8 @@
 
 from __future__ import annotations
 
-from PySide6.QtGui import QColor, QGuiApplication, QPalette
 from PySide6.QtCore import Qt
+from PySide6.QtGui import QColor, QGuiApplication, QPalette
 
 from core.drawing.palette import Palette
 

@@ -202,7 +202,9 @@ class Window(QMainWindow):
 
     def new_sheet(self) -> None:
         if self._may_leave():
-            self.bench.open(edit.with_text(new_sheet("Query plan", self.bench.sheet.catalog, self.bench.sheet.data), "A", ""), None)
+            self.bench.open(
+                edit.with_text(new_sheet("Query plan", self.bench.sheet.catalog, self.bench.sheet.data), "A", ""), None
+            )
             self.focus_text()
 
     def _may_leave(self) -> bool:
@@ -268,7 +270,9 @@ class Window(QMainWindow):
 
     def open_demo(self) -> None:
         if self._may_leave():
-            self.worker.start("making the demo", lambda cancel, progress: demo_sheet.demo(progress, cancel), self._demo_ready)
+            self.worker.start(
+                "making the demo", lambda cancel, progress: demo_sheet.demo(progress, cancel), self._demo_ready
+            )
 
     def _demo_ready(self, sheet: object) -> None:
         from core.sheet.document import Sheet
@@ -321,7 +325,9 @@ class Window(QMainWindow):
             self._save(self.bench.path)
 
     def save_dialog(self) -> None:
-        path, _ = QFileDialog.getSaveFileName(self, "Save the sheet", f"{self.bench.sheet.title}{SHEET_ENDING}", f"Sheets (*{SHEET_ENDING})")
+        path, _ = QFileDialog.getSaveFileName(
+            self, "Save the sheet", f"{self.bench.sheet.title}{SHEET_ENDING}", f"Sheets (*{SHEET_ENDING})"
+        )
         if path:
             target = Path(path)
             self._save(target if target.suffix else target.with_suffix(SHEET_ENDING))
@@ -381,7 +387,9 @@ class Window(QMainWindow):
         if operator is None:
             return
         known = next((c.text for c in self.bench.sheet.callouts if c.operator is operator), "")
-        text, accepted = QInputDialog.getMultiLineText(self, "Note", "A note at this operator (empty takes it away)", known)
+        text, accepted = QInputDialog.getMultiLineText(
+            self, "Note", "A note at this operator (empty takes it away)", known
+        )
         if accepted:
             self.bench.note(operator, text)
 
@@ -475,7 +483,9 @@ class Window(QMainWindow):
         self.bench.selection = None
         self.bench.do(f"better formulation {target}", sheet)
         self.canvas.fit()
-        self.say(f"{len(chain)} rewrites; estimated rows in all ÷ {max(1.0, chain[0].before / max(1.0, chain[-1].after)):.1f}")
+        self.say(
+            f"{len(chain)} rewrites; estimated rows in all ÷ {max(1.0, chain[0].before / max(1.0, chain[-1].after)):.1f}"
+        )
 
     def apply_rewrite(self) -> None:
         self.panel.apply_current()

@@ -85,7 +85,8 @@ class Canvas(QWidget):
         scale = min((self.width() - 2 * margin) / wide, (self.height() - 2 * margin) / high)
         self.zoom = max(_LEAST, min(1.25, scale))
         self.origin = QPointF(
-            left - (self.width() / self.zoom - wide) / 2, top - max(margin / self.zoom, (self.height() / self.zoom - high) / 2)
+            left - (self.width() / self.zoom - wide) / 2,
+            top - max(margin / self.zoom, (self.height() / self.zoom - high) / 2),
         )
         self.update()
 
@@ -145,7 +146,9 @@ class Canvas(QWidget):
 
     def mousePressEvent(self, event: QMouseEvent) -> None:
         self.setFocus()
-        pans = event.button() == Qt.MouseButton.MiddleButton or (event.button() == Qt.MouseButton.LeftButton and self._space)
+        pans = event.button() == Qt.MouseButton.MiddleButton or (
+            event.button() == Qt.MouseButton.LeftButton and self._space
+        )
         if pans:
             self._drag = event.position()
             self.setCursor(Qt.CursorShape.ClosedHandCursor)

@@ -58,7 +58,9 @@ def ground_of(asked: argparse.Namespace) -> Ground:
     try:
         if asked.catalog:
             is_ddl = asked.catalog.lower().endswith(".sql") or asked.catalog == "-"
-            catalog = catalog_from_ddl(read_text(asked.catalog), asked.dialect) if is_ddl else load_catalog(asked.catalog)
+            catalog = (
+                catalog_from_ddl(read_text(asked.catalog), asked.dialect) if is_ddl else load_catalog(asked.catalog)
+            )
         if not asked.data:
             return Ground(catalog)
         engine = DuckEngine.over(asked.data)

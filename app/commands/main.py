@@ -21,7 +21,9 @@ COMMANDS = ("read", "draw", "compare", "findings", "improve", "write", "profile"
 def _common() -> argparse.ArgumentParser:
     common = argparse.ArgumentParser(add_help=False)
     common.add_argument("--catalog", metavar="FILE", default="", help="a catalog file (.toml), or DDL (.sql)")
-    common.add_argument("--data", metavar="SOURCE", default="", help="a folder, a DuckDB file or a data file; read only")
+    common.add_argument(
+        "--data", metavar="SOURCE", default="", help="a folder, a DuckDB file or a data file; read only"
+    )
     common.add_argument("--dialect", default="duckdb", help="the SQL dialect of the queries (default: duckdb)")
     common.add_argument("--json", action="store_true", help="print JSON for machines")
     return common
@@ -46,7 +48,9 @@ def parser() -> argparse.ArgumentParser:
     made.add_argument("--measure", action="store_true", help="count the rows of every operator in the data")
     made.add_argument("--title", default="", help="the name of the sheet")
     made.add_argument("--palette", choices=("print", "light", "dark"), default="print", help="colours (default: print)")
-    made = commands.add_parser("compare", parents=common, help="whether two queries are equal: a proof, or data on which they differ")
+    made = commands.add_parser(
+        "compare", parents=common, help="whether two queries are equal: a proof, or data on which they differ"
+    )
     made.add_argument("a")
     made.add_argument("b")
     made.add_argument("--seconds", type=float, default=10.0, help="how long to look for a difference (default: 10)")
@@ -54,7 +58,9 @@ def parser() -> argparse.ArgumentParser:
     made = commands.add_parser("findings", parents=common, help="defects and dangers, the most work first")
     made.add_argument("query")
     made.add_argument("--measure", action="store_true", help="count the rows of every operator in the data")
-    made.add_argument("--above", type=float, default=None, metavar="ROWS", help="exit with 1 if a finding causes more rows than this")
+    made.add_argument(
+        "--above", type=float, default=None, metavar="ROWS", help="exit with 1 if a finding causes more rows than this"
+    )
     made = commands.add_parser("improve", parents=common, help="a better formulation, and why")
     made.add_argument("query")
     made.add_argument("--seconds", type=float, default=5.0, help="how long to search (default: 5)")
@@ -171,8 +177,17 @@ def findings(asked: argparse.Namespace) -> int:
         )
     else:
         for f in found:
-            cure = f"mended by: {f.offer.rule.title}" if f.offer is not None else f"no rewrite mends it: {f.why_not}" if f.why_not else ""
-            print(f"{f.kind}  ({rows_text(f.work)} rows, {f.evidence.word})\n  {f.sentence}" + (f"\n  {cure}" if cure else ""))
+            cure = (
+                f"mended by: {f.offer.rule.title}"
+                if f.offer is not None
+                else f"no rewrite mends it: {f.why_not}"
+                if f.why_not
+                else ""
+            )
+            print(
+                f"{f.kind}  ({rows_text(f.work)} rows, {f.evidence.word})\n  {f.sentence}"
+                + (f"\n  {cure}" if cure else "")
+            )
         if not found:
             print("nothing found")
         print_caution()
@@ -193,7 +208,13 @@ def improve(asked: argparse.Namespace) -> int:
     sql = write_sql(best, asked.to or asked.dialect)
     if asked.json:
         steps = [
-            {"rewrite": s.offer.rule.name, "title": s.offer.rule.title, "what": s.offer.what, "before": s.before, "after": s.after}
+            {
+                "rewrite": s.offer.rule.name,
+                "title": s.offer.rule.title,
+                "what": s.offer.what,
+                "before": s.before,
+                "after": s.after,
+            }
             for s in chain
         ]
         print_json({"revisions": steps, "sql": sql})
@@ -201,7 +222,9 @@ def improve(asked: argparse.Namespace) -> int:
     if not chain:
         print("-- no offered rewrite lowers the total of rows")
     for i, step in enumerate(chain, 1):
-        effect = f"{rows_text(step.before)} → {rows_text(step.after)} rows in all  ({ratio_text(step.before, step.after)})"
+        effect = (
+            f"{rows_text(step.before)} → {rows_text(step.after)} rows in all  ({ratio_text(step.before, step.after)})"
+        )
         print(f"-- {i}  {step.offer.rule.title}: {step.offer.what}\n--    {effect}")
     print(sql)
     print_caution()
@@ -246,7 +269,15 @@ def profile(asked: argparse.Namespace) -> int:
     return FINE
 
 
-_RUN = {"read": read, "draw": draw, "compare": compare, "findings": findings, "improve": improve, "write": write, "profile": profile}
+_RUN = {
+    "read": read,
+    "draw": draw,
+    "compare": compare,
+    "findings": findings,
+    "improve": improve,
+    "write": write,
+    "profile": profile,
+}
 
 
 def main(arguments: list[str] | None = None) -> int:
@@ -281,7 +312,9 @@ def _fault() -> int:
     """Our own fault: the trace goes to a file that can be attached to a report."""
     import tempfile
 
-    with tempfile.NamedTemporaryFile("w", prefix="planimeter-fault-", suffix=".txt", delete=False, encoding="utf-8") as file:
+    with tempfile.NamedTemporaryFile(
+        "w", prefix="planimeter-fault-", suffix=".txt", delete=False, encoding="utf-8"
+    ) as file:
         traceback.print_exc(file=file)
     print(f"this is a fault of Planimeter; what happened is written down in {file.name}", file=sys.stderr)
     return FAULT

@@ -70,7 +70,13 @@ def size_document(size: Size) -> dict[str, Any]:
         "bytes": size.bytes,
         "evidence": size.best_evidence.word,
         "derivation": [
-            {"text": line.text, "formula": line.formula, "value": line.value, "evidence": line.evidence.word, "source": line.source}
+            {
+                "text": line.text,
+                "formula": line.formula,
+                "value": line.value,
+                "evidence": line.evidence.word,
+                "source": line.source,
+            }
             for line in size.derivation
         ],
     }

@@ -48,7 +48,9 @@ def to_image(display: DisplayList, palette: Palette, dpi: int = 144) -> QImage:
     """The drawing as an image; 96 dpi is one pixel for a sheet unit."""
     left, top, right, bottom = display.bounds()
     scale = dpi / 96
-    image = QImage(max(1, round((right - left) * scale)), max(1, round((bottom - top) * scale)), QImage.Format.Format_RGB32)
+    image = QImage(
+        max(1, round((right - left) * scale)), max(1, round((bottom - top) * scale)), QImage.Format.Format_RGB32
+    )
     image.setDotsPerMeterX(round(dpi / 0.0254))
     image.setDotsPerMeterY(round(dpi / 0.0254))
     image.fill(QColor(palette["paper"]))
@@ -68,7 +70,9 @@ def _pdf(display: DisplayList, palette: Palette, target: Path, payload: bytes) -
     writer.setCreator("Planimeter")
     writer.setResolution(288)
     # One sheet unit is 1/96 inch, 0.75 point: the page is exactly the drawing.
-    writer.setPageSize(QPageSize(QSizeF(wide * 0.75, high * 0.75), QPageSize.Unit.Point, "", QPageSize.SizeMatchPolicy.ExactMatch))
+    writer.setPageSize(
+        QPageSize(QSizeF(wide * 0.75, high * 0.75), QPageSize.Unit.Point, "", QPageSize.SizeMatchPolicy.ExactMatch)
+    )
     writer.setPageMargins(QMarginsF(0, 0, 0, 0))
     if payload:
         writer.addFileAttachment(_ATTACHMENT, payload, "application/json")

@@ -19,7 +19,9 @@ _LEAST_DETAIL = 8.0
 _NEAR = 0.7
 
 
-def paint(painter: QPainter, display: DisplayList, palette: Palette, clip: QRectF | None = None, zoom: float = 1.0) -> None:
+def paint(
+    painter: QPainter, display: DisplayList, palette: Palette, clip: QRectF | None = None, zoom: float = 1.0
+) -> None:
     """Paints what lies within `clip` (sheet units). At a small `zoom` text that could not be read is left out."""
     painter.setRenderHint(QPainter.RenderHint.Antialiasing)
     painter.setRenderHint(QPainter.RenderHint.TextAntialiasing)

@@ -33,7 +33,9 @@ class Below(QWidget):
         self.findings.itemActivated.connect(self._cure)
         self.revisions = _tree("Revisions", ["revision", "rewrite", "rows in all", "change"])
         self.revisions.itemActivated.connect(self._to_revision)
-        self.catalog = _tree("Catalog", ["relation or attribute", "type", "rows or distinct", "nulls", "least", "greatest", "evidence"])
+        self.catalog = _tree(
+            "Catalog", ["relation or attribute", "type", "rows or distinct", "nulls", "least", "greatest", "evidence"]
+        )
         self.verdict_text = QTextBrowser()
         self.verdict_text.setFont(font("sans", 13))
         self.verdict_text.document().setDocumentMargin(10)
@@ -192,7 +194,9 @@ def _witness_html(verdict: Verdict, soft: str) -> str:
 def _table(title: str, names: list[str], rows: object, soft: str) -> str:
     head = "".join(f"<th align='left' style='color:{soft}; padding-right:8px'>{escape(n)}</th>" for n in names)
     body = "".join(
-        "<tr>" + "".join(f"<td style='padding-right:8px'>{'NULL' if v is None else escape(str(v))}</td>" for v in row) + "</tr>"
+        "<tr>"
+        + "".join(f"<td style='padding-right:8px'>{'NULL' if v is None else escape(str(v))}</td>" for v in row)
+        + "</tr>"
         for row in rows  # type: ignore[attr-defined]
     )
     empty = "" if body else f"<tr><td style='color:{soft}'>no rows</td></tr>"

@@ -202,7 +202,9 @@ class OperatorPanel(QWidget):
         keys = sorted(known.keys, key=lambda k: (len(k), sorted(a.id for a in k)))
         soft = self.roles["soft"]
         if keys:
-            named = ["(" + ", ".join(sorted(a.name for a in key)) + ")" if key else "at most one row" for key in keys[:4]]
+            named = [
+                "(" + ", ".join(sorted(a.name for a in key)) + ")" if key else "at most one row" for key in keys[:4]
+            ]
             text = f"keys: {', '.join(named)}"
         else:
             text = "keys: none known"
@@ -231,5 +233,3 @@ def _off(size: Size) -> str:
     if factor < 1.05:
         return "right"
     return f"{factor:.1f} times too {'high' if estimate > true else 'low'}"
-
-

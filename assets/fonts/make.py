@@ -29,7 +29,12 @@ RANGES = ["U+0020-007E", "U+00A0-017F", "U+0370-03FF", "U+2010-2027", "U+2030-20
 RANGES += ["U+2200-22FF", "U+2460-2473", "U+25A0-25FF", "U+27D5-27D7", "U+2A1D"]
 
 
-FAMILIES = {"serif": "Planimeter Serif", "sans": "Planimeter Sans", "mono": "Planimeter Mono", "math": "Planimeter Signs"}
+FAMILIES = {
+    "serif": "Planimeter Serif",
+    "sans": "Planimeter Sans",
+    "mono": "Planimeter Mono",
+    "math": "Planimeter Signs",
+}
 STYLES = {"bold": "Bold", "italic": "Italic", "": "Regular"}
 
 
@@ -41,7 +46,13 @@ def rename(font: TTFont, face: str) -> None:
     for record in list(names.names):
         if record.nameID in (1, 2, 3, 4, 6, 16, 17, 21, 22, 25):
             names.removeNames(nameID=record.nameID)
-    for number, text in ((1, family), (2, kind), (3, f"{family} {kind}"), (4, f"{family} {kind}"), (6, f"{family}-{kind}".replace(" ", ""))):
+    for number, text in (
+        (1, family),
+        (2, kind),
+        (3, f"{family} {kind}"),
+        (4, f"{family} {kind}"),
+        (6, f"{family}-{kind}".replace(" ", "")),
+    ):
         names.setName(text, number, 3, 1, 0x409)
 
 

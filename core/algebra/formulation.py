@@ -78,9 +78,7 @@ class Formulation:
     def replaced(self, changes: Mapping[Operator, Operator]) -> Formulation:
         """The formulation with operators replaced wherever they stand. Names and spans move to what stands in their place."""
         roots, became = rebuilt(self.roots(), changes)
-        outputs = tuple(
-            replace(output, operator=root) for output, root in zip(self.outputs, roots, strict=True)
-        )
+        outputs = tuple(replace(output, operator=root) for output, root in zip(self.outputs, roots, strict=True))
         names, aliases, spans = (
             {became.get(old, old): value for old, value in known.items()}
             for known in (self.names, self.aliases, self.spans)

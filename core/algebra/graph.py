@@ -82,9 +82,7 @@ def with_inputs(operator: Operator, new: tuple[Operator, ...]) -> Operator:
             return replace(operator, base=new[0], step=new[1])
         case SetOperation():
             return replace(operator, inputs=new)
-        case (
-            Select() | Project() | Distinct() | Group() | Nest() | Unnest() | Window() | Sort() | Limit()
-        ):
+        case Select() | Project() | Distinct() | Group() | Nest() | Unnest() | Window() | Sort() | Limit():
             return replace(operator, input=new[0])
         case Relation() | Values() | TableFunction() | Recurrence():
             return operator
@@ -140,9 +138,7 @@ def with_scalars(operator: Operator, change: Callable[[Node], Node]) -> Operator
         case Unnest(term=term):
             return replace(operator, term=apply(term))
         case Window():
-            return replace(
-                operator, columns=tuple(WindowColumn(c.attribute, apply(c.call)) for c in operator.columns)
-            )
+            return replace(operator, columns=tuple(WindowColumn(c.attribute, apply(c.call)) for c in operator.columns))
         case Sort(keys=keys):
             return replace(operator, keys=tuple(apply(key) for key in keys))
         case Limit(count=count, offset=offset):

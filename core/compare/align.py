@@ -6,7 +6,6 @@ from dataclasses import dataclass
 
 from core.algebra.formulation import Formulation
 from core.algebra.graph import postorder
-
 from core.algebra.operators import Operator, Relation
 from core.compare.canonical import part_key
 
@@ -53,5 +52,3 @@ def align(a: Formulation, b: Formulation) -> Alignment:
 def _shape(operator: Operator) -> tuple[object, ...]:
     relations = sorted(o.name for o in postorder(operator) if isinstance(o, Relation))
     return (type(operator).__name__.replace("Distinct", "Group"), tuple(relations))
-
-

@@ -433,5 +433,6 @@ def _limit(operator: Limit, outer: Label) -> Leaf:
     text, labels = _finished(operator.input, [*(Ref(a) for a in kept), *keys], outer)
     bound = " ".join("-" if s is None else term_text(s, outer) for s in (operator.count, operator.offset))
     order = ", ".join(labels[len(kept) :])
-    return Leaf(digest(f"limit {bound} {operator.with_ties} by {order} of {text}"), dict(zip(kept, labels, strict=False)))
-
+    return Leaf(
+        digest(f"limit {bound} {operator.with_ties} by {order} of {text}"), dict(zip(kept, labels, strict=False))
+    )

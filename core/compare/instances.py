@@ -51,7 +51,9 @@ def schema_of(formulations: Iterable[Formulation], catalog: Catalog) -> tuple[Ca
         pending.extend(key.relation for key in facts.foreign_keys)
     kept = catalog_of(found.values())
     # Foreign keys into relations that nobody describes cannot be checked.
-    return catalog_of(replace(f, foreign_keys=tuple(k for k in f.foreign_keys if kept.relation(k.relation))) for f in kept), notes
+    return catalog_of(
+        replace(f, foreign_keys=tuple(k for k in f.foreign_keys if kept.relation(k.relation))) for f in kept
+    ), notes
 
 
 def _inferred(relation: Relation, formulation: Formulation) -> RelationFacts:
@@ -197,7 +199,9 @@ def _row(
     return tuple(values[a.name.lower()] for a in facts.attributes)
 
 
-def _partners(key: ForeignKey, data: Data, others: Mapping[str, RelationFacts], values: dict[str, Any]) -> list[tuple[Any, ...]]:
+def _partners(
+    key: ForeignKey, data: Data, others: Mapping[str, RelationFacts], values: dict[str, Any]
+) -> list[tuple[Any, ...]]:
     """The values that a foreign key may take. A relation that refers to itself may refer to the row in the making."""
     rows = data.get(key.relation.lower())
     if rows is None:

@@ -115,9 +115,7 @@ def _comparison(operator: ComparisonOperator, left: Scalar, right: Scalar, label
     return f"({first} {operator.value} {second})"
 
 
-def _closed(
-    operator: ComparisonOperator, left: Scalar, right: Scalar
-) -> tuple[ComparisonOperator, Scalar, Scalar]:
+def _closed(operator: ComparisonOperator, left: Scalar, right: Scalar) -> tuple[ComparisonOperator, Scalar, Scalar]:
     """Among whole numbers `x < 6` is `x <= 5`: bounds are written closed."""
     shift = {ComparisonOperator.LESS: -1, ComparisonOperator.GREATER: 1}.get(operator)
     if shift is None:
@@ -214,7 +212,10 @@ _EXACT = (Family.INTEGER, Family.DECIMAL)
 def _arithmetic(node: Arithmetic, label: Label) -> str:
     left, right = term_text(node.left, label), term_text(node.right, label)
     families = {type_of(node.left).family, type_of(node.right).family}
-    commutes = node.operator in (ArithmeticOperator.ADD, ArithmeticOperator.MULTIPLY) and families <= {*_EXACT, Family.FLOAT}
+    commutes = node.operator in (ArithmeticOperator.ADD, ArithmeticOperator.MULTIPLY) and families <= {
+        *_EXACT,
+        Family.FLOAT,
+    }
     if commutes and right < left:
         left, right = right, left
     return f"({left} {node.operator.value} {right})"

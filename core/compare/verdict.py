@@ -96,9 +96,7 @@ def _equal(first: Normal, second: Normal, asides: tuple[str, ...], rests: tuple[
     return Verdict(Kind.EQUAL, tuple(reasons), (*steps, last), rests_on=rests, asides=asides, seconds=seconds)
 
 
-def _searched(
-    found: Search, first: Normal, second: Normal, asides: tuple[str, ...], rests: tuple[str, ...]
-) -> Verdict:
+def _searched(found: Search, first: Normal, second: Normal, asides: tuple[str, ...], rests: tuple[str, ...]) -> Verdict:
     rests = (*rests, *(n for n in found.notes if "does not run" not in n))
     if found.witness is not None:
         w = found.witness

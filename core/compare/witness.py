@@ -70,7 +70,9 @@ def order_sensitive(formulation: Formulation) -> bool:
         if isinstance(operator, Limit):
             return True
         for node in walk(*scalars(operator)):
-            if isinstance(node, Aggregate) and node.name in (ORDER_SENSITIVE | RANKING | {"lag", "lead", "first_value", "last_value", "nth_value"}):
+            if isinstance(node, Aggregate) and node.name in (
+                ORDER_SENSITIVE | RANKING | {"lag", "lead", "first_value", "last_value", "nth_value"}
+            ):
                 return True
     return False
 

@@ -322,7 +322,9 @@ class Facts:
         found = self.of(operator.input)
         counted = {c.attribute for c in operator.aggregates if self._never_null_aggregate(c.aggregate, operator, found)}
         if operator.sets is not None:
-            everywhere = frozenset.intersection(*(frozenset(part) for part in operator.sets)) if operator.sets else frozenset()
+            everywhere = (
+                frozenset.intersection(*(frozenset(part) for part in operator.sets)) if operator.sets else frozenset()
+            )
             return Properties(never_null=(found.never_null & everywhere) | counted)
         keys = frozenset(operator.keys)
         own = frozenset(attributes(operator))
@@ -344,7 +346,9 @@ class Facts:
         if call.name in NEVER_NULL:
             return True
         full = bool(operator.keys) and call.condition is None and operator.sets is None
-        return full and call.name in ("sum", "avg", "min", "max") and not can_be_null(call.arguments[0], found.never_null)
+        return (
+            full and call.name in ("sum", "avg", "min", "max") and not can_be_null(call.arguments[0], found.never_null)
+        )
 
     def _unnest(self, operator: Unnest) -> Properties:
         found = self.of(operator.input)
@@ -392,15 +396,24 @@ def _restricted(found: Properties, condition: Scalar, own: Key) -> Properties:
     for term in conjuncts(condition):
         match term:
             case Comparison(
-                operator=ComparisonOperator.EQUAL | ComparisonOperator.NOT_DISTINCT, left=Ref(attribute=a), right=Ref(attribute=b)
+                operator=ComparisonOperator.EQUAL | ComparisonOperator.NOT_DISTINCT,
+                left=Ref(attribute=a),
+                right=Ref(attribute=b),
             ):
                 if a in own and b in own:
                     same.append(frozenset({a, b}))
                 else:
                     constants.update({a, b} & own)
-            case Comparison(operator=ComparisonOperator.EQUAL | ComparisonOperator.NOT_DISTINCT, left=left, right=right):
+            case Comparison(
+                operator=ComparisonOperator.EQUAL | ComparisonOperator.NOT_DISTINCT, left=left, right=right
+            ):
                 for side, other in ((left, right), (right, left)):
-                    if isinstance(side, Ref) and side.attribute in own and not refs(other) & own and not volatile(other):
+                    if (
+                        isinstance(side, Ref)
+                        and side.attribute in own
+                        and not refs(other) & own
+                        and not volatile(other)
+                    ):
                         constants.add(side.attribute)
     never_null = found.never_null | (rejects_null_each(condition, found.never_null) & own)
     result = Properties(found.keys, never_null, found.dependencies, _merged(same), frozenset(constants))

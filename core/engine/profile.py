@@ -108,9 +108,7 @@ def _attribute(engine: DuckEngine, relation: RelationFacts, attribute: Attribute
         exact = frozenset({"nulls"})
         known = Statistics(nulls=nulls, exact=exact, evidence=Evidence.PROFILED, source="profile", as_of=relation.as_of)
         return replace(attribute, statistics=known)
-    counted = (
-        f"WITH counted AS MATERIALIZED (SELECT {column} AS v, count(*) AS n FROM {table} WHERE {column} IS NOT NULL GROUP BY 1) "
-    )
+    counted = f"WITH counted AS MATERIALIZED (SELECT {column} AS v, count(*) AS n FROM {table} WHERE {column} IS NOT NULL GROUP BY 1) "
     distinct, present, low, high, largest = engine.run(
         counted + "SELECT count(*), coalesce(sum(n), 0), min(v), max(v), max(n) FROM counted"
     ).rows[0]
@@ -236,4 +234,3 @@ def _dangling(engine: DuckEngine, name: str, mine: tuple[str, ...], target: str,
             f"SELECT count(*) FROM {quoted(name)} a WHERE {present} AND NOT EXISTS (SELECT 1 FROM {quoted(target)} b WHERE {pairs})"
         )
     )
-

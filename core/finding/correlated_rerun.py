@@ -6,8 +6,8 @@ from collections.abc import Iterator
 
 from core.algebra.graph import dependent, postorder
 from core.algebra.operators import Join, JoinKind
-from core.size.numbers import rows_text
 from core.finding.model import Finding, View
+from core.size.numbers import rows_text
 
 _RULES = ("scalar-aggregate-to-join", "lift-correlation")
 
@@ -28,4 +28,12 @@ def find(view: View) -> Iterator[Finding]:
             why_not = "no rule here takes the dependence away"
         names = ", ".join(sorted(a.name for a in dependent(operator)))
         sentence = f"the subquery reads {names} of the outer row: it runs {rows_text(runs)} times over {rows_text(inside)} rows"
-        yield Finding("correlated rerun", operator, sentence, runs * max(1.0, inside), view.evidence(operator.left), offer, why_not)
+        yield Finding(
+            "correlated rerun",
+            operator,
+            sentence,
+            runs * max(1.0, inside),
+            view.evidence(operator.left),
+            offer,
+            why_not,
+        )

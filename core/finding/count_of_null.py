@@ -6,11 +6,11 @@ from collections.abc import Iterator
 
 from core.algebra.notation import scalar_text
 from core.algebra.operators import Group
+from core.algebra.scalars import Ref
 from core.derive.lineage import base_of
 from core.derive.reject import can_be_null
-from core.size.numbers import rows_text
-from core.algebra.scalars import Ref
 from core.finding.model import Finding, View
+from core.size.numbers import rows_text
 
 
 def find(view: View) -> Iterator[Finding]:
@@ -21,7 +21,12 @@ def find(view: View) -> Iterator[Finding]:
         sure = view.facts.never_null(operator.input)
         for column in operator.aggregates:
             call = column.aggregate
-            if call.name != "count" or call.distinct or len(call.arguments) != 1 or not isinstance(call.arguments[0], Ref):
+            if (
+                call.name != "count"
+                or call.distinct
+                or len(call.arguments) != 1
+                or not isinstance(call.arguments[0], Ref)
+            ):
                 continue
             origin = bases.get(call.arguments[0].attribute)
             if origin is None or not can_be_null(call.arguments[0], sure):
@@ -34,6 +39,11 @@ def find(view: View) -> Iterator[Finding]:
             share = nulls / facts.rows
             sentence = f"{scalar_text(call)} leaves out rows without {origin[1].name}: {share:.0%} of {facts.name} ({rows_text(nulls)} rows)"
             yield Finding(
-                "count of what may be null", operator, sentence, float(nulls), view.evidence(operator.input), None,
+                "count of what may be null",
+                operator,
+                sentence,
+                float(nulls),
+                view.evidence(operator.input),
+                None,
                 "count(*) counts every row, if that is what is meant",
             )

@@ -6,15 +6,19 @@ from collections.abc import Iterator
 
 from core.algebra.functions import duplicate_insensitive
 from core.algebra.operators import Distinct, Group, Join, JoinKind, Operator, Project, Select
-from core.size.numbers import rows_text
 from core.finding.model import Finding, View, key_sides
+from core.size.numbers import rows_text
 
 
 def find(view: View) -> Iterator[Finding]:
     for operator in view.formulation.operators():
         if isinstance(operator, Distinct):
             what = "distinct removes"
-        elif isinstance(operator, Group) and operator.aggregates and all(duplicate_insensitive(c.aggregate) for c in operator.aggregates):
+        elif (
+            isinstance(operator, Group)
+            and operator.aggregates
+            and all(duplicate_insensitive(c.aggregate) for c in operator.aggregates)
+        ):
             what = "the grouping counts each value once, which undoes"
         else:
             continue
@@ -23,10 +27,14 @@ def find(view: View) -> Iterator[Finding]:
             continue
         offer, why_not = view.mend(join, "join-to-semi-join")
         made = view.rows(operator.input)
-        sentence = f"{what} what the joins below create: {rows_text(made)} rows in, {rows_text(view.rows(operator))} out"
+        sentence = (
+            f"{what} what the joins below create: {rows_text(made)} rows in, {rows_text(view.rows(operator))} out"
+        )
         if offer is not None:
             sentence += "; a semi-join gives the same answer"
-        yield Finding("duplicates made and then removed", operator, sentence, made, view.evidence(operator.input), offer, why_not)
+        yield Finding(
+            "duplicates made and then removed", operator, sentence, made, view.evidence(operator.input), offer, why_not
+        )
 
 
 def _fan_out_below(operator: Operator, view: View) -> Join | None:

@@ -6,15 +6,19 @@ from collections.abc import Iterator
 
 from core.algebra.notation import is_product
 from core.algebra.operators import Join, JoinKind
-from core.size.numbers import rows_text
 from core.finding.model import Finding, View, condition_of, key_sides
+from core.size.numbers import rows_text
 
 LEAST_FACTOR = 2.0
 
 
 def find(view: View) -> Iterator[Finding]:
     for operator in view.formulation.operators():
-        if not isinstance(operator, Join) or operator.kind not in (JoinKind.INNER, JoinKind.LEFT) or is_product(operator):
+        if (
+            not isinstance(operator, Join)
+            or operator.kind not in (JoinKind.INNER, JoinKind.LEFT)
+            or is_product(operator)
+        ):
             continue
         if any(key_sides(operator, view.facts)):
             continue

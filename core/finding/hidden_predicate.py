@@ -7,8 +7,8 @@ from collections.abc import Iterator
 from core.algebra.notation import scalar_text
 from core.algebra.operators import Relation, Select
 from core.algebra.scalars import Arithmetic, Call, Cast, Comparison, InList, Ref, Scalar, conjuncts, refs
-from core.size.numbers import rows_text
 from core.finding.model import Finding, View
+from core.size.numbers import rows_text
 from core.size.values import constant
 
 
@@ -27,8 +27,13 @@ def find(view: View) -> Iterator[Finding]:
                 "and computed, and no statistics say how many remain"
             )
             yield Finding(
-                "predicate hidden in a function", operator, sentence, view.rows(operator.input), view.evidence(operator.input),
-                None, f"write a range of {names} instead, where the function allows it",
+                "predicate hidden in a function",
+                operator,
+                sentence,
+                view.rows(operator.input),
+                view.evidence(operator.input),
+                None,
+                f"write a range of {names} instead, where the function allows it",
             )
 
 
@@ -40,7 +45,13 @@ def _hidden(term: Scalar) -> Scalar | None:
         return None
     for side, other in ((term.left, term.right), (term.right, term.left)):
         if isinstance(side, (Call, Cast, Arithmetic)) and refs(side) and constant(other) is not None:
-            inner = side.arguments if isinstance(side, Call) else (side.term,) if isinstance(side, Cast) else (side.left, side.right)
+            inner = (
+                side.arguments
+                if isinstance(side, Call)
+                else (side.term,)
+                if isinstance(side, Cast)
+                else (side.left, side.right)
+            )
             if any(isinstance(part, Ref) for part in inner) and len(refs(side)) == 1:
                 return side
     return None

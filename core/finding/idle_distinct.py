@@ -5,8 +5,8 @@ from __future__ import annotations
 from collections.abc import Iterator
 
 from core.algebra.operators import Distinct, SetOperation
-from core.size.numbers import rows_text
 from core.finding.model import Finding, View
+from core.size.numbers import rows_text
 
 
 def find(view: View) -> Iterator[Finding]:
@@ -22,4 +22,6 @@ def find(view: View) -> Iterator[Finding]:
         if offer is None or view.rows(operator) < 100:
             continue
         sentence = f"{what}: {rows_text(view.rows(operator))} rows are compared with each other for nothing"
-        yield Finding("no duplicates to remove", operator, sentence, view.rows(operator), view.evidence(operator), offer)
+        yield Finding(
+            "no duplicates to remove", operator, sentence, view.rows(operator), view.evidence(operator), offer
+        )

@@ -60,9 +60,7 @@ def _could_go_below(select: Select, worker: Operator) -> bool:
     if isinstance(worker, Group):
         return worker.sets is None and any(refs(term) and refs(term) <= set(worker.keys) for term in terms)
     if isinstance(worker, Window):
-        shared = [
-            {p.attribute for p in column.call.partition if isinstance(p, Ref)} for column in worker.columns
-        ]
+        shared = [{p.attribute for p in column.call.partition if isinstance(p, Ref)} for column in worker.columns]
         keys = set.intersection(*shared) if shared else set()
         return any(refs(term) and refs(term) <= keys for term in terms)
     return True

@@ -30,14 +30,21 @@ def find(view: View) -> Iterator[Finding]:
                 "where there are several, the total is not what is meant"
             )
             yield Finding(
-                "sum over a fan-out", operator, sentence, view.rows(join), view.evidence(join), None,
+                "sum over a fan-out",
+                operator,
+                sentence,
+                view.rows(join),
+                view.evidence(join),
+                None,
                 "sum before joining, or join only what is unique",
             )
 
 
 def _multiplying(operator: Operator, read: frozenset[object], group: Group, view: View) -> Join | None:
     """A join below that repeats the rows the summed value stands in."""
-    while isinstance(operator, (Select, Project)) or (isinstance(operator, Join) and operator.kind in (JoinKind.SEMI, JoinKind.ANTI)):
+    while isinstance(operator, (Select, Project)) or (
+        isinstance(operator, Join) and operator.kind in (JoinKind.SEMI, JoinKind.ANTI)
+    ):
         operator = operator.left if isinstance(operator, Join) else operator.input
     if not isinstance(operator, Join) or operator.kind not in (JoinKind.INNER, JoinKind.LEFT) or not read:
         return None
@@ -49,7 +56,9 @@ def _multiplying(operator: Operator, read: frozenset[object], group: Group, view
     repeats = not keys[1] if side is operator.left else not keys[0]
     # A price looked up for each parcel is meant to be repeated: the groups are then of parcels, not of prices. Where the
     # value's own row decides its group, each repetition is one too many.
-    decides = set(group.keys) <= view.facts.determined(group.input, set(attributes(side)) & set(attributes(group.input)))
+    decides = set(group.keys) <= view.facts.determined(
+        group.input, set(attributes(side)) & set(attributes(group.input))
+    )
     if repeats and decides:
         return operator
     return _multiplying(side, read, group, view)

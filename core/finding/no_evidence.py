@@ -6,8 +6,8 @@ from collections.abc import Iterator
 
 from core.algebra.operators import Relation
 from core.catalog.model import Evidence
-from core.size.numbers import rows_text
 from core.finding.model import Finding, View
+from core.size.numbers import rows_text
 
 
 def find(view: View) -> Iterator[Finding]:

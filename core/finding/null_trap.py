@@ -19,9 +19,13 @@ def find(view: View) -> Iterator[Finding]:
                 pass
             case _:
                 continue
-        loose = sorted(a.name for a in refs(inner) & set(attributes(operator.right)) - view.facts.never_null(operator.right))
+        loose = sorted(
+            a.name for a in refs(inner) & set(attributes(operator.right)) - view.facts.never_null(operator.right)
+        )
         if not loose:
             continue
         offer, why_not = view.mend(operator, "not-in-to-not-exists")
         sentence = f"NOT IN: a single NULL in {', '.join(loose)} empties the answer; NOT EXISTS would keep the rows"
-        yield Finding("null trap", operator, sentence, view.rows(operator.left), view.evidence(operator.left), offer, why_not)
+        yield Finding(
+            "null trap", operator, sentence, view.rows(operator.left), view.evidence(operator.left), offer, why_not
+        )

@@ -8,8 +8,8 @@ from core.algebra.graph import attributes, dependent
 from core.algebra.notation import is_product
 from core.algebra.operators import Join, JoinKind, Operator, Select
 from core.algebra.scalars import conjuncts, refs
-from core.size.numbers import rows_text
 from core.finding.model import Finding, View
+from core.size.numbers import rows_text
 
 
 def find(view: View) -> Iterator[Finding]:
@@ -21,7 +21,12 @@ def find(view: View) -> Iterator[Finding]:
             continue
         sentence = f"no condition joins the two inputs: {rows_text(left)} × {rows_text(right)} rows"
         yield Finding(
-            "product by accident", operator, sentence, view.rows(operator), view.evidence(operator), None,
+            "product by accident",
+            operator,
+            sentence,
+            view.rows(operator),
+            view.evidence(operator),
+            None,
             "a condition is missing: only the author knows which",
         )
 

@@ -7,8 +7,8 @@ from collections.abc import Iterator
 from core.algebra.graph import postorder
 from core.algebra.operators import Operator, Relation, Values
 from core.compare.canonical import part_key
-from core.size.numbers import rows_text
 from core.finding.model import Finding, View
+from core.size.numbers import rows_text
 
 
 def find(view: View) -> Iterator[Finding]:
@@ -29,7 +29,11 @@ def find(view: View) -> Iterator[Finding]:
             continue
         sentence = f"this part gives the same rows as another one: {rows_text(work)} rows are worked on twice"
         yield Finding(
-            "the same work done twice", operator, sentence, work, view.evidence(operator), None,
+            "the same work done twice",
+            operator,
+            sentence,
+            work,
+            view.evidence(operator),
+            None,
             "write it once as a step (WITH ...) and use it twice",
         )
-

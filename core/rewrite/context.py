@@ -111,5 +111,3 @@ def _order_matters(operator: Operator, above: bool) -> bool:
 
 def _reads_order(call: Aggregate) -> bool:
     return order_sensitive(call) and not call.order
-
-

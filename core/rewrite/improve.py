@@ -19,10 +19,21 @@ from core.rewrite.context import Context
 from core.rewrite.rule import Offer
 from core.size import Size, size
 
-_IDLE = frozenset({"split-selection", "commute-join", "distinct-to-group", "group-to-distinct", "semi-join-to-join", "selection-out-of-join"})
+_IDLE = frozenset(
+    {
+        "split-selection",
+        "commute-join",
+        "distinct-to-group",
+        "group-to-distinct",
+        "semi-join-to-join",
+        "selection-out-of-join",
+    }
+)
 """Rules that only make room for others; the search does not take them on their own."""
 
-_TIDYING = frozenset({"count-distinct-to-count", "drop-distinct", "drop-sort", "union-to-union-all", "drop-identity-projection"})
+_TIDYING = frozenset(
+    {"count-distinct-to-count", "drop-distinct", "drop-sort", "union-to-union-all", "drop-identity-projection"}
+)
 
 _SETTLING = 1e-6
 

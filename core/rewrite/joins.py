@@ -35,7 +35,12 @@ def independent(join: Join) -> Check:
     )
 
 
-_TURNED = {JoinKind.INNER: JoinKind.INNER, JoinKind.FULL: JoinKind.FULL, JoinKind.LEFT: JoinKind.RIGHT, JoinKind.RIGHT: JoinKind.LEFT}
+_TURNED = {
+    JoinKind.INNER: JoinKind.INNER,
+    JoinKind.FULL: JoinKind.FULL,
+    JoinKind.LEFT: JoinKind.RIGHT,
+    JoinKind.RIGHT: JoinKind.LEFT,
+}
 
 
 def _commute(operator: Operator, context: Context) -> Attempt | None:
@@ -80,7 +85,11 @@ def _simplify_outer(operator: Operator, context: Context) -> Attempt | None:
     condition: Scalar
     if isinstance(operator, Select) and isinstance(operator.input, Join):
         join, condition = operator.input, operator.condition
-    elif isinstance(operator, Join) and operator.kind in (JoinKind.INNER, JoinKind.SEMI) and isinstance(operator.left, Join):
+    elif (
+        isinstance(operator, Join)
+        and operator.kind in (JoinKind.INNER, JoinKind.SEMI)
+        and isinstance(operator.left, Join)
+    ):
         join, condition = operator.left, operator.condition
     else:
         return None
@@ -232,7 +241,12 @@ def takes_whole_schema(operator: Operator, context: Context) -> bool:
 
 def _eliminate(operator: Operator, context: Context) -> Attempt | None:
     """A join that neither adds attributes that are read nor drops or multiplies rows."""
-    if not isinstance(operator, Join) or operator.kind not in (JoinKind.INNER, JoinKind.LEFT, JoinKind.SINGLE, JoinKind.SEMI):
+    if not isinstance(operator, Join) or operator.kind not in (
+        JoinKind.INNER,
+        JoinKind.LEFT,
+        JoinKind.SINGLE,
+        JoinKind.SEMI,
+    ):
         return None
     checks = []
     if operator.kind is not JoinKind.SEMI:
@@ -251,17 +265,32 @@ def _eliminate(operator: Operator, context: Context) -> Attempt | None:
             )
         )
     loose = [s for s in scalars(operator) if volatile(s)]
-    checks.append(check("same-at-every-call", not loose, "no function differs from call to call", "a function differs from call to call"))
+    checks.append(
+        check(
+            "same-at-every-call",
+            not loose,
+            "no function differs from call to call",
+            "a function differs from call to call",
+        )
+    )
     return Attempt(tuple(checks), lambda: operator.left, "without the join")
 
 
 def _null_test(operator: Operator, context: Context) -> Attempt | None:
     """σ r.k is null (L ⟕ R) keeps the left rows without a partner."""
-    if not isinstance(operator, Select) or not isinstance(operator.input, Join) or operator.input.kind is not JoinKind.LEFT:
+    if (
+        not isinstance(operator, Select)
+        or not isinstance(operator.input, Join)
+        or operator.input.kind is not JoinKind.LEFT
+    ):
         return None
     join = operator.input
     right = set(attributes(join.right))
-    tests = [t for t in conjuncts(operator.condition) if isinstance(t, IsNull) and isinstance(t.term, Ref) and t.term.attribute in right]
+    tests = [
+        t
+        for t in conjuncts(operator.condition)
+        if isinstance(t, IsNull) and isinstance(t.term, Ref) and t.term.attribute in right
+    ]
     if not tests:
         return None
     sure = context.facts.never_null(join.right) | _shown_present(join)

@@ -44,7 +44,9 @@ def steady(scalars: tuple[Scalar, ...] | list[Scalar]) -> Check:
     """No function among the scalars may differ from call to call."""
     loose = [s for s in scalars if volatile(s)]
     text = scalar_text(loose[0]) if loose else ""
-    return check("same-at-every-call", not loose, "no function differs from call to call", f"{text} differs from call to call")
+    return check(
+        "same-at-every-call", not loose, "no function differs from call to call", f"{text} differs from call to call"
+    )
 
 
 def _parted(condition: Scalar, movable: list[Scalar]) -> tuple[Scalar, Scalar]:
@@ -121,9 +123,7 @@ def _others(join: Join, side: Operator) -> set[Attribute]:
     return set(attributes(join)) - set(attributes(side))
 
 
-def _push_side(
-    operator: Select, join: Join, name: str, kinds: tuple[JoinKind, ...], terms: list[Scalar]
-) -> Attempt:
+def _push_side(operator: Select, join: Join, name: str, kinds: tuple[JoinKind, ...], terms: list[Scalar]) -> Attempt:
     moving, staying = _parted(operator.condition, terms)
     kept = "left" if name == "right" else "right"
 
@@ -181,7 +181,9 @@ def _below_group(operator: Operator, context: Context) -> Attempt | None:
         below = Group(Select(group.input, operator.condition), group.keys, group.aggregates, group.sets)
         return Attempt((lost,), lambda: below, "the selection before the grouping")
     moving, staying = _parted(operator.condition, terms)
-    plain = check("plain-grouping", group.sets is None, "every group has its keys", "in a grouping set without it a key is NULL")
+    plain = check(
+        "plain-grouping", group.sets is None, "every group has its keys", "in a grouping set without it a key is NULL"
+    )
     return Attempt(
         (plain, steady(terms)),
         lambda: _above(Group(Select(group.input, moving), group.keys, group.aggregates, group.sets), staying),
@@ -262,7 +264,9 @@ def _contradiction(operator: Operator, context: Context) -> Attempt | None:
                         fixed[side] = value
     if not never:
         return None
-    return Attempt((), lambda: Values(attributes(operator), ()), f"{scalar_text(operator.condition)} is never true: no rows")
+    return Attempt(
+        (), lambda: Values(attributes(operator), ()), f"{scalar_text(operator.condition)} is never true: no rows"
+    )
 
 
 def _tautology(operator: Operator, context: Context) -> Attempt | None:
@@ -363,4 +367,3 @@ RULES = (
         "σa=b∧p(a)(R) = σa=b∧p(a)∧p(b)(R)", "Ullman, Principles of Database Systems", "selection", _through_equality,
     ),
 )  # fmt: skip
-

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-
 from core.algebra.graph import attributes
 from core.algebra.notation import scalar_text
 from core.algebra.operators import (
@@ -54,8 +53,12 @@ def _merge_projections(operator: Operator, context: Context) -> Attempt | None:
     # A merged column may not take the identity of an input attribute that now means something else.
     own = set(attributes(inner.input))
     clash = [c for c in merged if c.attribute in own and c.value != Ref(c.attribute)]
-    apart = check("identities-apart", not clash, "every column keeps its own identity", "a column bears the identity of another")
-    return Attempt((steady(used), short, apart), lambda: Project(inner.input, merged), "one projection that computes everything")
+    apart = check(
+        "identities-apart", not clash, "every column keeps its own identity", "a column bears the identity of another"
+    )
+    return Attempt(
+        (steady(used), short, apart), lambda: Project(inner.input, merged), "one projection that computes everything"
+    )
 
 
 def _identity_projection(operator: Operator, context: Context) -> Attempt | None:
@@ -102,9 +105,13 @@ def _distinct_on_key(operator: Operator, context: Context) -> Attempt | None:
         "legal if a key of the relations below is declared and kept",
         proof=False,
     )
-    idle = check("duplicates-do-not-matter", not context.duplicates_matter[operator], "duplicates do not matter above", "")
+    idle = check(
+        "duplicates-do-not-matter", not context.duplicates_matter[operator], "duplicates do not matter above", ""
+    )
     either = legal if legal.passed or not idle.passed else idle
-    return Attempt((either,), lambda: operator.input, "without removing duplicates: there are none, or they do not matter")
+    return Attempt(
+        (either,), lambda: operator.input, "without removing duplicates: there are none, or they do not matter"
+    )
 
 
 def _keys(operator: Operator, context: Context) -> str:
@@ -191,7 +198,9 @@ def _count_distinct(operator: Operator, context: Context) -> Attempt | None:
     changed: dict[AggregateColumn, Aggregate] = {}
     for column in counted:
         argument = column.aggregate.arguments[0]
-        unique = isinstance(argument, Ref) and context.facts.is_key(operator.input, [*operator.keys, argument.attribute])
+        unique = isinstance(argument, Ref) and context.facts.is_key(
+            operator.input, [*operator.keys, argument.attribute]
+        )
         text = scalar_text(argument)
         checks.append(
             check(
@@ -260,7 +269,9 @@ def _disjoint_and_distinct(operator: SetOperation, context: Context) -> bool:
     for part, source in zip(operator.inputs, operator.sources, strict=True):
         if not context.facts.is_key(part, source):
             return False
-    constants = [_constant_columns(part, source) for part, source in zip(operator.inputs, operator.sources, strict=True)]
+    constants = [
+        _constant_columns(part, source) for part, source in zip(operator.inputs, operator.sources, strict=True)
+    ]
     for i, first in enumerate(constants):
         for second in constants[i + 1 :]:
             if not any(place in second and second[place] != value for place, value in first.items()):
@@ -286,7 +297,9 @@ def _flatten_union(operator: Operator, context: Context) -> Attempt | None:
     """(R ∪ S) ∪ T as one union of three."""
     if not isinstance(operator, SetOperation) or operator.kind is not SetKind.UNION:
         return None
-    place = next((i for i, p in enumerate(operator.inputs) if isinstance(p, SetOperation) and p.kind is SetKind.UNION), None)
+    place = next(
+        (i for i, p in enumerate(operator.inputs) if isinstance(p, SetOperation) and p.kind is SetKind.UNION), None
+    )
     if place is None:
         return None
     inner = operator.inputs[place]
@@ -327,7 +340,9 @@ def _to_half_join(operator: Operator, context: Context) -> Attempt | None:
 
     def build() -> Operator:
         left, right = operator.inputs
-        named = Project(left, tuple(Column(a, Ref(s)) for a, s in zip(operator.attributes, operator.sources[0], strict=True)))
+        named = Project(
+            left, tuple(Column(a, Ref(s)) for a, s in zip(operator.attributes, operator.sources[0], strict=True))
+        )
         same = [
             Comparison(ComparisonOperator.NOT_DISTINCT, Ref(a), Ref(s))
             for a, s in zip(operator.attributes, operator.sources[1], strict=True)
@@ -398,4 +413,3 @@ RULES = (
     Rule("drop-sort", "a sort that nothing needs", "γ(τ(R)) = γ(R), τ(R) ⋈ S = R ⋈ S as bags", TEXTBOOK, "order", _remove_sort),
     Rule("limit-below-projection", "limit before computing columns", "λ(πf(R)) = πf(λ(R))", TEXTBOOK, "order", _limit_below_projection),
 )  # fmt: skip
-

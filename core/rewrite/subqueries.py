@@ -243,4 +243,3 @@ RULES = (
     Rule("not-in-to-not-exists", "NOT IN without NULLs", "R ▷(r=s is not false) S = R ▷(r=s) S where r, s are never NULL", "ISO/IEC 9075-2, quantified predicates", "subqueries", _not_in),
     Rule("mark-to-half-join", "a truth value that only filters", "σm(R ⋉? S → m) = R ⋉ S, σ¬m likewise ▷", NEUMANN, "subqueries", _plain_exists),
 )  # fmt: skip
-

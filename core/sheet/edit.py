@@ -27,9 +27,7 @@ def with_rewrite(sheet: Sheet, letter: str, offer: Offer, choice: int = 0) -> Sh
     """The sheet after a rewrite; notes and measured counts follow their operators."""
     draft = sheet.draft(letter)
     assert draft is not None and draft.formulation is not None
-    callouts = tuple(
-        replace(c, operator=_kept(c.operator, offer)) if c.letter == letter else c for c in sheet.callouts
-    )
+    callouts = tuple(replace(c, operator=_kept(c.operator, offer)) if c.letter == letter else c for c in sheet.callouts)
     return replace(sheet.with_draft(rewritten(draft, offer, choice)), callouts=callouts)
 
 

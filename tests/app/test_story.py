@@ -30,7 +30,9 @@ def story() -> Sheet:
     engine = DuckEngine.over_folder(folder)
     catalog, _ = profile(engine, catalog_from_ddl(demo.schema()))
     engine.close()
-    return edit.with_text(new_sheet("Late parcels", catalog, str(folder)), "A", demo.queries()["01-late-parcels-by-depot.a"])
+    return edit.with_text(
+        new_sheet("Late parcels", catalog, str(folder)), "A", demo.queries()["01-late-parcels-by-depot.a"]
+    )
 
 
 @pytest.fixture
@@ -61,7 +63,12 @@ def click(window: Window, operator: object) -> None:
     owner = window.canvas.drawn.owners[operator]  # type: ignore[index]
     left, top, _, _ = window.canvas.drawn.display.boxes[owner]
     place = window.canvas.to_window(left + 20, top + 20)
-    QTest.mouseClick(window.canvas, Qt.MouseButton.LeftButton, Qt.KeyboardModifier.NoModifier, QPoint(round(place.x()), round(place.y())))
+    QTest.mouseClick(
+        window.canvas,
+        Qt.MouseButton.LeftButton,
+        Qt.KeyboardModifier.NoModifier,
+        QPoint(round(place.x()), round(place.y())),
+    )
 
 
 def idle(qtbot: QtBot, window: Window) -> None:
@@ -207,6 +214,8 @@ def test_both_themes_and_the_print_view_are_painted(window: Window, tmp_path: Pa
         window.actions_by_method[method].trigger()
         picture = window.canvas.grab().toImage()
         seen.add(picture.pixelColor(3, 3).name())
-        colours = {picture.pixelColor(x, y).rgb() for x in range(0, picture.width(), 7) for y in range(0, picture.height(), 7)}
+        colours = {
+            picture.pixelColor(x, y).rgb() for x in range(0, picture.width(), 7) for y in range(0, picture.height(), 7)
+        }
         assert len(colours) > 3
     assert len(seen) >= 2

@@ -36,7 +36,9 @@ def test_every_form_of_constraint() -> None:
     assert c.foreign_keys[0] == ForeignKey(("z",), "a", ("x",)) and c.unique == (("z",),)
 
 
-@pytest.mark.parametrize("text", [EVERYTHING, demo.schema(), tpch.schema(), tpcds.schema()], ids=["all", "demo", "tpch", "tpcds"])
+@pytest.mark.parametrize(
+    "text", [EVERYTHING, demo.schema(), tpch.schema(), tpcds.schema()], ids=["all", "demo", "tpch", "tpcds"]
+)
 def test_written_ddl_says_the_same_and_the_engine_takes_it(text: str) -> None:
     catalog = catalog_from_ddl(text)
     again = catalog_from_ddl(ddl_of(catalog))

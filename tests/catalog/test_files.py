@@ -28,7 +28,9 @@ from core.catalog.model import (
 VALUES = {
     "BIGINT": st.integers(-(2**62), 2**62),
     "DOUBLE": st.floats(allow_nan=False, allow_infinity=False),
-    "DECIMAL(18, 3)": st.decimals(allow_nan=False, allow_infinity=False, places=3, min_value=-(10**12), max_value=10**12),
+    "DECIMAL(18, 3)": st.decimals(
+        allow_nan=False, allow_infinity=False, places=3, min_value=-(10**12), max_value=10**12
+    ),
     "VARCHAR": st.text(max_size=8).filter(lambda s: "\x00" not in s and all(not 0xD800 <= ord(c) < 0xE000 for c in s)),
     "DATE": st.dates(),
     "TIMESTAMP": st.datetimes(),
@@ -102,7 +104,13 @@ def one(value: object, kind: str) -> Catalog:
 
 @pytest.mark.parametrize(
     ("value", "kind"),
-    [(Decimal("1.50"), "DECIMAL(5, 2)"), (date(2024, 2, 29), "DATE"), (datetime(2024, 1, 1, 12, 30, 0, 5), "TIMESTAMP"), (time(1, 2), "TIME"), (1.0, "DOUBLE")],
+    [
+        (Decimal("1.50"), "DECIMAL(5, 2)"),
+        (date(2024, 2, 29), "DATE"),
+        (datetime(2024, 1, 1, 12, 30, 0, 5), "TIMESTAMP"),
+        (time(1, 2), "TIME"),
+        (1.0, "DOUBLE"),
+    ],
 )
 def test_values_keep_their_types(value: object, kind: str) -> None:
     again = catalog_from_toml(catalog_to_toml(one(value, kind))).relation("t")

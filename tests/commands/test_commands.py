@@ -121,7 +121,9 @@ def test_errors_have_a_place_and_a_caret(ground: list[str], capsys: pytest.Captu
         ["read", "-", "--catalog", "nowhere.toml"],
     ],
 )
-def test_what_is_not_there_is_said(arguments: list[str], capsys: pytest.CaptureFixture[str], monkeypatch: pytest.MonkeyPatch) -> None:
+def test_what_is_not_there_is_said(
+    arguments: list[str], capsys: pytest.CaptureFixture[str], monkeypatch: pytest.MonkeyPatch
+) -> None:
     monkeypatch.setattr("sys.stdin", io.StringIO("select 1"))
     assert main(arguments) == 3
     assert "nowhere" in capsys.readouterr().err

@@ -85,5 +85,8 @@ def test_a_witness_recreates_itself() -> None:
 
     connection = duckdb.connect()
     connection.execute(witness.sql())
-    assert connection.execute("select a from r where c > 2").fetchall() != connection.execute("select a from r where c >= 2").fetchall()
+    assert (
+        connection.execute("select a from r where c > 2").fetchall()
+        != connection.execute("select a from r where c >= 2").fetchall()
+    )
     connection.close()

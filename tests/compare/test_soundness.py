@@ -18,7 +18,10 @@ from tests.generate.queries import random_query
 from tests.rewrite.harness import CATALOG, FACTS, difference
 
 MUTATIONS = (
-    (r"\b(semi join|anti join|left join|right join|full join|join)\b", ["join", "left join", "right join", "full join", "semi join", "anti join"]),
+    (
+        r"\b(semi join|anti join|left join|right join|full join|join)\b",
+        ["join", "left join", "right join", "full join", "semi join", "anti join"],
+    ),
     (r"(?<= )(=|<>|<|<=|>|>=)(?= )", ["=", "<>", "<", "<=", ">", ">="]),
     (r"\b[0-3]\b", ["0", "1", "2", "3"]),
     (r"\b(and|or)\b", ["and", "or"]),

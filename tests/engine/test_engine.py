@@ -70,7 +70,9 @@ def test_nothing_outside_is_read_or_written(files: Path) -> None:
     assert {p.name: p.read_bytes() for p in files.iterdir()} == before
 
 
-@pytest.mark.parametrize(("source", "message"), [("nowhere", "nowhere"), ("x.parquet", "no file"), ("x.xlsx", "neither")])
+@pytest.mark.parametrize(
+    ("source", "message"), [("nowhere", "nowhere"), ("x.parquet", "no file"), ("x.xlsx", "neither")]
+)
 def test_what_is_missing_is_said(tmp_path: Path, source: str, message: str) -> None:
     with pytest.raises(EngineError, match=message):
         DuckEngine.over(tmp_path / source)
@@ -143,9 +145,22 @@ def test_profiling_reports_and_stops(files: Path) -> None:
     engine.close()
 
 
-@pytest.mark.parametrize(("source", "name"), [("tpch", "q03"), ("tpch", "q13"), ("tpch", "q21"), ("demo", "01-late-parcels-by-depot.a"), ("demo", "14-stops-per-driver")])
+@pytest.mark.parametrize(
+    ("source", "name"),
+    [
+        ("tpch", "q03"),
+        ("tpch", "q13"),
+        ("tpch", "q21"),
+        ("demo", "01-late-parcels-by-depot.a"),
+        ("demo", "14-stops-per-driver"),
+    ],
+)
 def test_measured_counts_are_the_engines(source: str, name: str) -> None:
-    folder, schema, texts = (tpch.folder(0.01), tpch.schema(), tpch.queries()) if source == "tpch" else (demo.folder(0.2), demo.schema(), demo.queries())
+    folder, schema, texts = (
+        (tpch.folder(0.01), tpch.schema(), tpch.queries())
+        if source == "tpch"
+        else (demo.folder(0.2), demo.schema(), demo.queries())
+    )
     engine = DuckEngine.over_folder(folder)
     text = next(t for n, t in texts.items() if n.lstrip("q0") == name.lstrip("q0") or n == name)
     formulation = read_sql(text, catalog_from_ddl(schema))
@@ -162,4 +177,6 @@ def test_a_relation_that_refers_to_itself_is_inserted() -> None:
     engine = create_instance(catalog, {"d": [(1, 2), (2, 3), (3, None), (4, 4)][:3]})
     assert engine.value("select count(*) from d") == 3
     engine.close()
-    assert instance_sql(catalog, {"d": [(1, 2), (2, None)]}).index("(2, NULL)") < instance_sql(catalog, {"d": [(1, 2), (2, None)]}).index("(1, 2)")
+    assert instance_sql(catalog, {"d": [(1, 2), (2, None)]}).index("(2, NULL)") < instance_sql(
+        catalog, {"d": [(1, 2), (2, None)]}
+    ).index("(1, 2)")

@@ -83,7 +83,12 @@ def test_they_are_ordered_by_work_and_speak() -> None:
         works = [f.work for f in found(text)]
         assert works == sorted(works, reverse=True)
         for finding in found(text):
-            assert finding.sentence[0].islower() or not finding.sentence[0].isalpha() or finding.sentence.startswith("NOT IN") or finding.sentence.startswith("UNION")
+            assert (
+                finding.sentence[0].islower()
+                or not finding.sentence[0].isalpha()
+                or finding.sentence.startswith("NOT IN")
+                or finding.sentence.startswith("UNION")
+            )
             assert not finding.sentence.endswith(".")
             assert finding.offer is not None or finding.why_not or finding.kind == "estimate resting on nothing"
 

@@ -119,7 +119,9 @@ class QueryMaker:
         text, columns = self.item(depth)
         for _ in range(self.rng.choice([0, 0, 1, 1, 2])):
             other, more = self.item(depth)
-            kind = self.rng.choice(["join", "join", "left join", "right join", "full join", ",", "semi join", "anti join"])
+            kind = self.rng.choice(
+                ["join", "join", "left join", "right join", "full join", ",", "semi join", "anti join"]
+            )
             if kind == ",":
                 text, columns = f"{text} cross join {other}", columns + more
                 continue
@@ -177,7 +179,9 @@ class QueryMaker:
         if roll < 0.71:
             return f"{self.number_term(scope)} between {self.rng.randint(0, 2)} and {self.rng.randint(1, 3)}"
         if roll < 0.77:
-            return f"{self.text_term(scope)} {self.rng.choice(['=', '<', 'like'])} {self.rng.choice(['x', '%y', 'x_'])!r}"
+            return (
+                f"{self.text_term(scope)} {self.rng.choice(['=', '<', 'like'])} {self.rng.choice(['x', '%y', 'x_'])!r}"
+            )
         if roll < 0.9:
             joiner = self.rng.choice(["and", "or"])
             return f"({self.condition(scope, depth, outer)} {joiner} {self.condition(scope, depth, outer)})"
@@ -185,7 +189,7 @@ class QueryMaker:
 
     def subquery_condition(self, scope: _Scope, depth: int) -> str:
         inner_outer = scope if self.chance(0.6) else None
-        body, kinds = self.select(depth, inner_outer, [False])
+        body, _ = self.select(depth, inner_outer, [False])
         roll = self.rng.random()
         negated = self.rng.choice(["", "not "])
         if roll < 0.4:
@@ -242,7 +246,9 @@ class QueryMaker:
         return f"select {distinct}{', '.join(items)} from {source}{where}", wanted
 
     def _window(self, scope: _Scope) -> str:
-        call = self.rng.choice(["count(*)", "rank()", f"sum({self.number_term(scope)})", f"max({self.number_term(scope)})"])
+        call = self.rng.choice(
+            ["count(*)", "rank()", f"sum({self.number_term(scope)})", f"max({self.number_term(scope)})"]
+        )
         by = f"partition by {self.number_term(scope)} " if self.chance(0.6) else ""
         numbers = [c for c, text in scope.columns if not text]
         order = f"order by {self.rng.choice(numbers)}" if numbers and (call == "rank()" or self.chance(0.5)) else ""
@@ -250,7 +256,9 @@ class QueryMaker:
             call = "count(*)"
         return f"{call} over ({by}{order})"
 
-    def _grouped(self, source: str, where: str, scope: _Scope, wanted: list[bool], depth: int) -> tuple[str, list[bool]]:
+    def _grouped(
+        self, source: str, where: str, scope: _Scope, wanted: list[bool], depth: int
+    ) -> tuple[str, list[bool]]:
         numbers = [c for c, text in scope.columns if not text]
         texts = [c for c, text in scope.columns if text]
         keys = self.rng.sample(numbers, min(len(numbers), self.rng.randint(0, 2)))

@@ -16,8 +16,22 @@ from core.language.sql.write import write_sql
 
 TRUTHS = {"true": TRUE, "false": FALSE, "null": UNKNOWN_TRUTH}
 # ISO/IEC 9075-2, truth tables of AND, OR and NOT over true, false, unknown.
-AND = {("true", "true"): "true", ("true", "false"): "false", ("true", "null"): "null", ("false", "false"): "false", ("false", "null"): "false", ("null", "null"): "null"}
-OR = {("true", "true"): "true", ("true", "false"): "true", ("true", "null"): "true", ("false", "false"): "false", ("false", "null"): "null", ("null", "null"): "null"}
+AND = {
+    ("true", "true"): "true",
+    ("true", "false"): "false",
+    ("true", "null"): "null",
+    ("false", "false"): "false",
+    ("false", "null"): "false",
+    ("null", "null"): "null",
+}
+OR = {
+    ("true", "true"): "true",
+    ("true", "false"): "true",
+    ("true", "null"): "true",
+    ("false", "false"): "false",
+    ("false", "null"): "null",
+    ("null", "null"): "null",
+}
 NOT = {"true": "false", "false": "true", "null": "null"}
 
 
@@ -66,7 +80,13 @@ create table supply (pnum integer, quan integer, shipped date);
 # Kim, TODS 1982; Kiessling, VLDB 1985; Ganski, Wong, SIGMOD 1987: the empty-group count (data from memory of the source).
 DATA = {
     "parts": [(3, 6), (10, 1), (8, 0)],
-    "supply": [(3, 4, "1979-07-03"), (3, 2, "1978-10-01"), (10, 1, "1978-06-08"), (10, 2, "1981-08-10"), (8, 5, "1983-05-07")],
+    "supply": [
+        (3, 4, "1979-07-03"),
+        (3, 2, "1978-10-01"),
+        (10, 1, "1978-06-08"),
+        (10, 2, "1981-08-10"),
+        (8, 5, "1983-05-07"),
+    ],
 }
 NESTED = "select pnum from parts where qoh = (select count(shipped) from supply where supply.pnum = parts.pnum and shipped < '1980-01-01')"
 JOINED = (
@@ -94,10 +114,9 @@ def test_the_empty_group_count() -> None:
 
 def test_division() -> None:
     """Codd 1972; the suppliers and parts of Date's Introduction to Database Systems (from memory of the source)."""
-    from core.algebra.operators import Divide, Project, Relation, Column
-    from core.algebra.scalars import Ref
+    from core.algebra.operators import Column, Divide, Project, Relation
+    from core.algebra.scalars import Ref, fresh
     from core.algebra.types import TEXT
-    from core.algebra.scalars import fresh
     from core.language.sql.write import write_query
 
     catalog = catalog_from_ddl("create table sp (s varchar, p varchar); create table wanted (p varchar);")

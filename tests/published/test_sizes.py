@@ -14,13 +14,16 @@ from core.size.equalities import pair_share
 
 def relation(name: str, rows: int, **distinct: int) -> RelationFacts:
     attributes = tuple(
-        AttributeFacts(a, INTEGER, False, Statistics(distinct=d, nulls=0, evidence=Evidence.DECLARED)) for a, d in distinct.items()
+        AttributeFacts(a, INTEGER, False, Statistics(distinct=d, nulls=0, evidence=Evidence.DECLARED))
+        for a, d in distinct.items()
     )
     return RelationFacts(name, attributes, rows=rows, rows_evidence=Evidence.DECLARED)
 
 
 # Garcia-Molina, Ullman, Widom, Database Systems: The Complete Book, size estimation (figures from memory of the source).
-BOOK = catalog_of([relation("r", 1000, a=1000, b=20), relation("s", 2000, b=50, c=100), relation("u", 5000, c=500, d=10)])
+BOOK = catalog_of(
+    [relation("r", 1000, a=1000, b=20), relation("s", 2000, b=50, c=100), relation("u", 5000, c=500, d=10)]
+)
 
 
 @pytest.mark.parametrize(
@@ -41,7 +44,9 @@ def test_selections_of_the_book() -> None:
     """T = 10,000, V(a) = 50: a = 10 gives 200; with b < 20 (a third) 67; either gives 3,466 by independence (same source)."""
     facts = relation("t", 10_000, a=50)
     unknown = AttributeFacts("b", INTEGER, False)
-    catalog = Catalog({"t": RelationFacts("t", (*facts.attributes, unknown), rows=10_000, rows_evidence=Evidence.DECLARED)})
+    catalog = Catalog(
+        {"t": RelationFacts("t", (*facts.attributes, unknown), rows=10_000, rows_evidence=Evidence.DECLARED)}
+    )
     for condition, rows in (("a = 10", 200), ("a = 10 and b < 20", 66.7), ("a = 10 or b < 20", 3466.7)):
         formulation = read_sql(f"select * from t where {condition}", catalog)
         assert size(formulation, catalog)[formulation.root].rows == pytest.approx(rows, rel=1e-3)
@@ -49,15 +54,25 @@ def test_selections_of_the_book() -> None:
 
 def test_system_r_factors_without_statistics() -> None:
     """Selinger et al., SIGMOD 1979, table of selectivity factors."""
-    catalog = Catalog({"t": RelationFacts("t", (AttributeFacts("a", INTEGER), AttributeFacts("b", INTEGER)), rows=1200)})
-    for condition, share in (("a > 5", 1 / 3), ("a between 1 and 5", 1 / 4), ("a in (1, 2, 3)", 0.3), ("a in (1,2,3,4,5,6)", 0.5)):
+    catalog = Catalog(
+        {"t": RelationFacts("t", (AttributeFacts("a", INTEGER), AttributeFacts("b", INTEGER)), rows=1200)}
+    )
+    for condition, share in (
+        ("a > 5", 1 / 3),
+        ("a between 1 and 5", 1 / 4),
+        ("a in (1, 2, 3)", 0.3),
+        ("a in (1,2,3,4,5,6)", 0.5),
+    ):
         formulation = read_sql(f"select * from t where {condition}", catalog)
         found = size(formulation, catalog)[formulation.root]
         assert found.rows == pytest.approx(1200 * share)
         assert found.evidence is Evidence.ASSUMED
 
 
-@pytest.mark.parametrize(("m", "k", "expected"), [(100, 100, 63.40), (50, 20, 16.62), (1000, 50, 48.79), (5000, 10_000, 4323.5), (50_000, 10_000, 9063.5)])
+@pytest.mark.parametrize(
+    ("m", "k", "expected"),
+    [(100, 100, 63.40), (50, 20, 16.62), (1000, 50, 48.79), (5000, 10_000, 4323.5), (50_000, 10_000, 9063.5)],
+)
 def test_cardenas(m: int, k: int, expected: float) -> None:
     """Cardenas, CACM 1975: m(1-(1-1/m)^k)."""
     assert groups(m, k) == pytest.approx(expected, rel=2e-4)

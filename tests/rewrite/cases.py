@@ -219,7 +219,10 @@ CASES: dict[str, tuple[list[str], list[tuple[str, str]]]] = {
         ],
     ),
     "mark-to-half-join": (
-        ["select a from r where (b in (select h from t)) is true", "select a from r where (c in (select h from t)) is false"],
+        [
+            "select a from r where (b in (select h from t)) is true",
+            "select a from r where (c in (select h from t)) is false",
+        ],
         [
             (
                 "select a, m from (select a, b in (select h from t) as m from r) x where m",

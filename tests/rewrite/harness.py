@@ -22,9 +22,7 @@ CATALOG = catalog_from_ddl(SCHEMA)
 FACTS = Facts(CATALOG)
 
 
-def answers(
-    formulation: Formulation, rule: str, disabled: Collection[str] = ()
-) -> list[Offer | Refusal]:
+def answers(formulation: Formulation, rule: str, disabled: Collection[str] = ()) -> list[Offer | Refusal]:
     """What a rule says at every operator."""
     context = Context(formulation, FACTS)
     rules = [rule_named(rule)]

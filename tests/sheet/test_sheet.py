@@ -27,7 +27,8 @@ def sheet_with_rewrites(count: int = 3) -> Sheet:
             a
             for op in draft.formulation.operators()
             for a in rewrites(draft.formulation, op, sheet.catalog)
-            if isinstance(a, Offer) and a.rule.name in ("join-to-semi-join", "count-distinct-to-count", "push-selection-below-join")
+            if isinstance(a, Offer)
+            and a.rule.name in ("join-to-semi-join", "count-distinct-to-count", "push-selection-below-join")
         ]
         sheet = edit.with_rewrite(sheet, "A", offers[0])
     return sheet

@@ -27,7 +27,7 @@ def deep(function: Callable[[], T], levels: int) -> T:
     def run() -> None:
         try:
             result.append(function())
-        except BaseException as error:  # noqa: BLE001 - handed to the caller, whatever it is
+        except BaseException as error:
             failure.append(error)
 
     with _lock:

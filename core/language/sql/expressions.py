@@ -453,7 +453,7 @@ _READERS: dict[type[exp.Expression], Callable[[exp.Expression, Block], Scalar]] 
     exp.Exists: lambda node, block: subqueries.mark_exists(node, block),
     exp.Subquery: lambda node, block: subqueries.scalar_value(node, block),
     exp.Select: lambda node, block: subqueries.scalar_value(node, block),
-    **{cls: _comparison for cls in _COMPARISONS},
-    **{cls: _arithmetic for cls in _ARITHMETIC},
+    **dict.fromkeys(_COMPARISONS, _comparison),
+    **dict.fromkeys(_ARITHMETIC, _arithmetic),
 }
 

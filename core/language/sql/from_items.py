@@ -160,7 +160,7 @@ def _derived(node: exp.Expression, result: Result, alias: tuple[str, list[str]],
 
 def _subquery(node: exp.Subquery, block: Block, left: Item | None) -> Item:
     inner = node.this
-    if isinstance(inner, (exp.Table, exp.Subquery)) and not isinstance(inner, exp.Query) or (
+    if (isinstance(inner, (exp.Table, exp.Subquery)) and not isinstance(inner, exp.Query)) or (
         isinstance(inner, exp.Subquery) and inner.args.get("joins")
     ):
         item = _item(inner, block, left)

@@ -49,7 +49,7 @@ def _inside(roots: Iterable[exp.Expression], stop: type[exp.Expression] | tuple[
     while pending:
         node = pending.pop()
         yield node
-        if isinstance(node, (exp.Query, exp.Values)) or isinstance(node, stop):
+        if isinstance(node, (exp.Query, exp.Values, *(stop if isinstance(stop, tuple) else (stop,)))):
             continue
         pending.extend(list(node.iter_expressions())[::-1])
 

@@ -9,7 +9,7 @@ from sqlglot import exp
 
 from core.algebra.formulation import Span
 from core.algebra.operators import JoinKind, Operator, Values
-from core.algebra.scalars import TRUE, Attribute, Scalar, fresh
+from core.algebra.scalars import Attribute, Scalar, fresh
 from core.algebra.types import BOOLEAN
 from core.catalog.model import Catalog
 from core.language.diagnostic import Diagnostic, ReadError, nearest
