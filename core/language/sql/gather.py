@@ -72,6 +72,7 @@ from core.language.sql.blocks import (
     derived,
 )
 from core.language.sql.sharing import Sharing
+from core.language.sql.write_dialect import WriteError
 from core.language.sql.write_scalars import list_of_rows
 
 _HEAVY = 60
@@ -87,10 +88,6 @@ LATERAL_DIALECTS = frozenset({"duckdb", "postgres", "snowflake", "spark", "datab
 """Engines with LEFT JOIN LATERAL."""
 
 QUALIFY_DIALECTS = frozenset({"duckdb", "snowflake", "bigquery", "databricks", "teradata", "clickhouse", "redshift"})
-
-
-class WriteError(ValueError):
-    """An operator that the asked language cannot express."""
 
 
 @dataclass(slots=True)
@@ -383,7 +380,7 @@ def _group(operator: Group, below: Query) -> Block:
     block = _block(below, Stage.WHERE)
     used = [column.aggregate for column in operator.aggregates]
     terms = any(isinstance(_meaning(block, key), SubqueryTerm) for key in operator.keys)
-    constant = any(key in block.definitions and not _leaves(block, [Ref(key)]) for key in operator.keys)
+    constant = any(key in block.definitions and not leaves(block, [Ref(key)]) for key in operator.keys)
     if (
         terms
         or constant
@@ -414,7 +411,7 @@ def _entangled(block: Block, operator: Group) -> bool:
     """Whether keys of grouping sets are computed from the same columns: engines tell them apart by their text."""
     if operator.sets is None or not any(key in block.definitions for key in operator.keys):
         return False
-    read = [_leaves(block, [Ref(key)]) for key in operator.keys]
+    read = [leaves(block, [Ref(key)]) for key in operator.keys]
     return sum(map(len, read)) > len(set[Attribute]().union(*read))
 
 
@@ -427,7 +424,7 @@ def _with_own_arguments(
     computed in a derived table first.
     """
     own = {a for item in block.items for a in Block([item]).hidden()}
-    outer = _leaves(block, [*used, *(Ref(key) for key in keys)]).difference(own)
+    outer = leaves(block, [*used, *(Ref(key) for key in keys)]).difference(own)
     if not outer:
         return block, used
     direct = sorted(refs(*used).difference(own, block.definitions))
@@ -437,7 +434,7 @@ def _with_own_arguments(
     return derived(block), [renamed(aggregate, inside) for aggregate in used]
 
 
-def _leaves(block: Block, scalars: Sequence[Node]) -> set[Attribute]:
+def leaves(block: Block, scalars: Sequence[Node]) -> set[Attribute]:
     """The attributes that scalars read when the block's definitions are put in their place."""
     pending, seen, found = list(refs(*scalars)), set[Attribute](), set[Attribute]()
     while pending:
@@ -551,7 +548,7 @@ def _sort(operator: Sort, below: Query) -> Query:
 
 def _telling(block: Block, keys: tuple[SortKey, ...]) -> tuple[SortKey, ...]:
     """Less the constants, which order nothing and which SQL would take for column numbers."""
-    return tuple(key for key in keys if _leaves(block, [key]) or volatile(key))
+    return tuple(key for key in keys if leaves(block, [key]) or volatile(key))
 
 
 def _limit(operator: Limit, below: Query, gathering: Gathering) -> Query:

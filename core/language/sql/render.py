@@ -34,7 +34,8 @@ from core.language.sql.blocks import (
     SubqueryTerm,
     derived,
 )
-from core.language.sql.gather import WriteError, reads_aggregates, reads_terms, unique_names
+from core.language.sql.gather import leaves, reads_aggregates, reads_terms, unique_names
+from core.language.sql.write_dialect import WriteError
 from core.language.sql.write_scalars import chained, within, write_scalar, written_terms
 
 Names = Mapping[Attribute, str]
@@ -131,6 +132,8 @@ def _set_query(query: SetQuery, outer: View | None, names: Names | None) -> exp.
         node = cast(exp.Expression, write_query_node(part, outer, own))
         if isinstance(part, SetQuery) or (isinstance(part, Block) and (part.order or part.count or part.offset)):
             node = exp.Subquery(this=node)
+        if result is not None:
+            node = cast(exp.Expression, _unalias(cast(exp.Query, node)))
         result = node if result is None else classes[query.kind](this=result, expression=node, distinct=query.distinct)
     assert isinstance(result, exp.Query)
     view = View(places={a: ("", name) for a, name in shown.items()}, lone=True)
@@ -149,7 +152,8 @@ def _select(block: Block, outer: View | None, names: Names | None) -> exp.Query:
     _where(select, "having", exp.Having, block.having, view)
     if block.keys == () and block.sets is None and not block.having and not reads_aggregates(block):
         # HAVING makes a single group of all rows where no aggregate in sight does (ISO/IEC 9075-2).
-        select.set("having", exp.Having(this=exp.true()))
+        always = exp.GTE(this=exp.Count(this=exp.Star(), big_int=True), expression=exp.Literal.number(0))
+        select.set("having", exp.Having(this=always))
     _where(select, "qualify", exp.Qualify, block.qualify, view)
     columns = [_column(attribute, shown[attribute], view) for attribute in block.columns]
     select.set("expressions", columns or [exp.Literal.number(1)])
@@ -158,8 +162,19 @@ def _select(block: Block, outer: View | None, names: Names | None) -> exp.Query:
     ordering = View(
         block, outer, view.places, view.fields, view.lone, view.aliases, {n.lower() for n in shown.values()}
     )
-    _tail(select, block, ordering, outer, shown)
+    told = {
+        attribute: column.copy() if isinstance(column, exp.Column) else exp.column(_identifier(shown[attribute]))
+        for attribute, column in zip(block.columns, columns, strict=True)
+    }
+    _tail(select, block, ordering, outer, told)
     return select
+
+
+def _unalias(query: exp.Query) -> exp.Query:
+    """The query without names for its columns, where nobody reads them."""
+    if isinstance(query, exp.Select) and not query.args.get("order"):
+        query.set("expressions", [e.this if isinstance(e, exp.Alias) else e for e in query.expressions])
+    return query
 
 
 def _view(block: Block, outer: View | None) -> View:
@@ -167,8 +182,15 @@ def _view(block: Block, outer: View | None) -> View:
     view = View(block, outer)
     taken = set() if outer is None else outer.around()
     _place(block.items, view, taken)
-    view.lone = sum(1 for item in block.items for _ in _leaves(item)) == 1
+    view.lone = sum(1 for item in block.items for _ in _leaves(item)) == 1 and not _reads_outer(block)
     return view
+
+
+def _reads_outer(block: Block) -> bool:
+    """Whether the block itself reads a row around it; then it says of each column whose it is."""
+    conditions = [c for c in (*block.where, *block.having, *block.qualify) if not isinstance(c, SubqueryTerm)]
+    scalars = [*conditions, *(Ref(a) for a in block.columns), *block.order, *(item.on for item in block.items)]
+    return not leaves(block, scalars) <= block.hidden()
 
 
 def _leaves(item: Item) -> Iterable[Item]:
@@ -359,14 +381,20 @@ def _group(select: exp.Select, block: Block, view: View) -> None:
     select.set("group", exp.Group(expressions=[exp.GroupingSets(expressions=sets)]))
 
 
-def _tail(node: exp.Query, query: Query, view: View, outer: View | None, shown: Names | None = None) -> None:
-    """ORDER BY, LIMIT and OFFSET."""
+def _tail(
+    node: exp.Query,
+    query: Query,
+    view: View,
+    outer: View | None,
+    told: Mapping[Attribute, exp.Expression] | None = None,
+) -> None:
+    """ORDER BY, LIMIT and OFFSET. `told` is how a column of the SELECT list is named there."""
     keys = [key for key in query.order if not isinstance(key.term, Literal)]
     if keys:
         ordered: list[exp.Expression] = []
         for key in keys:
-            if shown is not None and isinstance(key.term, Ref) and key.term.attribute in shown:
-                name = exp.column(_identifier(shown[key.term.attribute]))
+            if told is not None and isinstance(key.term, Ref) and key.term.attribute in told:
+                name = told[key.term.attribute]
                 ordered.append(exp.Ordered(this=name, desc=key.descending or None, nulls_first=key.nulls_first))
             else:
                 ordered.append(write_scalar(key, view.name))
@@ -389,7 +417,7 @@ def write_term(term: SubqueryTerm, view: View) -> exp.Expression:
     """EXISTS, IN, NOT IN, a three-valued mark or a scalar subquery."""
     if term.kind is JoinKind.SINGLE:
         assert term.attribute is not None
-        return exp.Subquery(this=write_query_node(_selecting(term.query, (term.attribute,)), view))
+        return exp.Subquery(this=_unalias(write_query_node(_selecting(term.query, (term.attribute,)), view)))
     if term.kind is JoinKind.SEMI:
         return _membership(term.condition, term.query, view) or _exists(term.query, term.condition, view)
     if term.kind is JoinKind.ANTI:
@@ -422,7 +450,7 @@ def _membership(condition: Scalar, query: Query, view: View) -> exp.Expression |
             inner = refs(right)
             if refs(left) & own or not isinstance(right, Ref) or not inner <= own:
                 return None
-            node = write_query_node(_selecting(query, (right.attribute,)), view)
+            node = _unalias(write_query_node(_selecting(query, (right.attribute,)), view))
             return exp.In(this=within(write_scalar(left, view.name), 5), query=exp.Subquery(this=node))
     return None
 

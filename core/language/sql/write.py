@@ -12,8 +12,9 @@ from core.algebra.operators import Operator
 from core.algebra.scalars import Attribute, Ref, walk
 from core.language.sql.blocks import Block, Query, SetQuery, derived
 from core.language.sql.depth import deep
-from core.language.sql.gather import Gathering, WriteError, gather, unique_names
+from core.language.sql.gather import Gathering, gather, unique_names
 from core.language.sql.render import steps_node, write_query_node
+from core.language.sql.write_dialect import WriteError, fitted
 
 __all__ = ["WriteError", "write_query", "write_sql"]
 
@@ -53,8 +54,9 @@ def _written(
     def write() -> str:
         # The answer itself is no step of its own text.
         kept = {operator: name for operator, name in names.items() if operator is not root}
-        gathering = Gathering(dialect, kept, aliases)
-        query = gather((root,), gathering)[root]
+        graph = fitted(root, kept, aliases, dialect)
+        gathering = Gathering(dialect, graph.names, graph.aliases)
+        query = gather((graph.root,), gathering)[graph.root]
         node = _outermost(query, columns)
         with_ = steps_node(gathering.steps)
         if with_ is not None:

@@ -33,7 +33,7 @@ from core.algebra.scalars import (
     SortKey,
     WindowCall,
 )
-from core.algebra.types import Family
+from core.algebra.types import RELATION, Family
 from core.language.sql.forms import bound_arguments, filled, form_of, hole
 
 Naming = Callable[[Attribute], exp.Expression]
@@ -119,11 +119,15 @@ def write_scalar(node: Node, naming: Naming) -> exp.Expression:
             absent = isinstance(otherwise, Literal) and otherwise.text is None
             return exp.Case(ifs=ifs, default=None if absent else write_scalar(otherwise, naming))
         case Cast(term=term, type=type_, lenient=lenient):
-            if type_.family in (Family.UNKNOWN, Family.NULL):
+            if type_.family in (Family.UNKNOWN, Family.NULL) or type_ == RELATION:
                 return write_scalar(term, naming)
             to = exp.DataType.build(type_.name, dialect="duckdb")
-            cls = exp.TryCast if lenient else exp.Cast
-            return cls(this=write_scalar(term, naming), to=to)
+            inner = write_scalar(term, naming)
+            if not lenient:
+                return exp.Cast(this=inner, to=to)
+            # Some dialects have TRY_CAST for text alone, and are asked whether it is one.
+            inner.type = exp.DataType.build("VARCHAR")
+            return exp.TryCast(this=inner, to=to)
         case Call():
             return _call(node, naming)
         case SortKey(term=term, descending=descending, nulls_first=nulls_first):
