@@ -14,6 +14,7 @@ CAUTION = (
 )
 _GAP = 130.0
 _HEAD = 64.0
+_DIMENSION = 12.5
 
 
 @dataclass(frozen=True, slots=True)
@@ -66,29 +67,54 @@ def draw_columns(columns: Sequence[Column], dimensions: Sequence[Dimension] = ()
 
 
 def _dimension(out: DisplayList, dimension: Dimension) -> None:
-    """A line with two arrowheads between matched operators, broken by its text. It runs where no plate is."""
+    """A line with two arrowheads between matched operators, under its text. It runs where nothing else is drawn."""
     if dimension.left not in out.boxes or dimension.right not in out.boxes:
         return
     a, b = out.boxes[dimension.left], out.boxes[dimension.right]
-    start, end = a[2] + 34, b[0] - 14
-    obstacles = [box for owner, box in out.boxes.items() if owner not in (dimension.left, dimension.right)]
-    places = [(box[1] + box[3]) / 2 + shift for box in (a, b) for shift in (18, 0, -18)]
-
-    def crossed(y: float) -> list[Box]:
-        return [box for box in obstacles if box[0] < end and box[2] > start and box[1] - 18 < y < box[3] + 8]
-
-    y = next((y for y in places if not crossed(y)), places[0])
-    # Where every height is blocked, the line ends before the first plate in its way.
-    end = min([end, *(box[0] - 14 for box in crossed(y) if box[0] > start)])
-    start = max([start, *(box[2] + 14 for box in crossed(y) if box[2] < end)])
-    if end - start < width(dimension.text, "sans-bold", 12.5):
+    room = width(dimension.text, "sans-bold", _DIMENSION) + 20
+    obstacles = _obstacles(out, {dimension.left, dimension.right}, a[2], b[0])
+    best = (0.0, 0.0, 0.0)
+    for y in _heights(a, b):
+        # Where something stands in the way, the line keeps to the widest gap.
+        blocked = sorted((left - 14, right + 14) for left, top, right, bottom in obstacles if top < y + 9 and bottom > y - 20)
+        start = a[2] + 34
+        for left, right in [*blocked, (b[0] - 14, b[0])]:
+            if left - start > best[1] - best[0] + 1:
+                best = (start, left, y)
+            start = max(start, right)
+        if best[1] - best[0] >= b[0] - a[2] - 50:
+            break
+    start, end, y = best
+    if end - start < room:
         return
     for x in (start, end):
         out.add(Line(((x, y - 7), (x, y + 7)), ACCENT, 1.0))
     out.add(Line(((start, y), (end, y)), ACCENT, 1.0))
     for x, way in ((start, 1), (end, -1)):
         out.add(Line(((x + 7 * way, y - 3), (x, y), (x + 7 * way, y + 3)), ACCENT, 1.0))
-    out.add(Text((start + end) / 2, y - 7, dimension.text, "sans-bold", 12.5, ACCENT, "middle"))
+    out.add(Text((start + end) / 2, y - 7, dimension.text, "sans-bold", _DIMENSION, ACCENT, "middle"))
+
+
+def _heights(a: Box, b: Box) -> list[float]:
+    """Heights to try: about the middle of either plate first, then further from it."""
+    found = [(box[1] + box[3]) / 2 + shift for box in (a, b) for shift in (18.0, 0.0, -18.0)]
+    return found + [(box[1] + box[3]) / 2 + shift for box in (a, b) for shift in (30.0, -30.0, 9.0, -9.0)]
+
+
+def _obstacles(out: DisplayList, owners: set[str], left: float, right: float) -> list[Box]:
+    """What is drawn between two heights' ends: plates other than the two, their edges, texts, balloons."""
+    found = [box for owner, box in out.boxes.items() if owner not in owners]
+    for item, box in out.boxed():
+        if item.owner in owners:
+            continue
+        if isinstance(item, Line):
+            found += [
+                (min(x1, x2), min(y1, y2), max(x1, x2), max(y1, y2))
+                for (x1, y1), (x2, y2) in zip(item.points, item.points[1:], strict=False)
+            ]
+        else:
+            found.append(box)
+    return [box for box in found if box[0] < right and box[2] > left]
 
 
 # --- print -----------------------------------------------------------------------------------------------------------

@@ -18,7 +18,6 @@ from core.drawing.plates import ANCHOR, Plate, draw_plate, plate_of
 from core.drawing.tidy import Node, lay_out
 from core.size import Size
 
-
 _FIRST_BALLOON, _BALLOON = 44.0, 26.0
 
 
@@ -164,7 +163,7 @@ def _unclear(formulation: Formulation) -> Naming:
     owner: dict[Attribute, str] = {}
     for operator in formulation.operators():
         if isinstance(operator, Relation):
-            owner.update({a: operator.alias or operator.name for a in operator.attributes})
+            owner.update(dict.fromkeys(operator.attributes, operator.alias or operator.name))
     clashes: set[Attribute] = set()
     for operator in formulation.operators():
         by_name: dict[str, set[Attribute]] = {}

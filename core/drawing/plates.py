@@ -12,8 +12,8 @@ from core.algebra.scalars import Ref
 from core.catalog.model import Catalog
 from core.drawing.display import ACCENT, INK, SOFT, WASH, Circle, DisplayList, Line, Shape, Text
 from core.drawing.metrics import cut, width
-from core.size.numbers import rows_text
 from core.size import Size
+from core.size.numbers import rows_text
 
 GAUGE = 124.0
 ANCHOR = 74.0
@@ -47,12 +47,19 @@ class Plate:
     @property
     def width(self) -> float:
         """Wide enough for the title (up to a limit) and for the gauge with its number."""
-        if self.sign or not self.attributes:
+        if self.sign:
             title = _TEXT_LEFT + min(width(self.title, "mono", 11.5), WIDEST)
         else:
-            title = 10 + width(self.title, "serif-bold", 15) + 6 + min(width(_listed(self.attributes), "mono", 11.5), WIDEST - 80)
+            listed = min(width(_listed(self.attributes), "mono", 11.5), WIDEST - 80) if self.attributes else 0.0
+            title = 10 + width(self.name, "serif-bold", 15) + 6 + listed
         gauge = 12 + GAUGE + 8 + 64 if self.size is not None else 0.0
-        return max(title, gauge, _TEXT_LEFT + width(self.note, "mono", 10)) + 8
+        note = _TEXT_LEFT + min(width(self.note, "mono", 10), WIDEST)
+        return max(title, gauge, note) + 8
+
+    @property
+    def name(self) -> str:
+        """A relation's name as it is drawn: cut where it is very long."""
+        return cut(self.title, "serif-bold", 15, WIDEST)
 
 
 def _listed(names: tuple[tuple[str, bool], ...]) -> str:
@@ -132,8 +139,8 @@ def _sign(out: DisplayList, plate: Plate, left: float, top: float, role: str) ->
 
 def _relation(out: DisplayList, plate: Plate, left: float, top: float, role: str) -> None:
     """Name in bold, attributes in parentheses, key underlined."""
-    out.add(Text(left + 10, top + 20, plate.title, "serif-bold", 15, role, owner=plate.owner))
-    x = left + 10 + width(plate.title, "serif-bold", 15) + 6
+    out.add(Text(left + 10, top + 20, plate.name, "serif-bold", 15, role, owner=plate.owner))
+    x = left + 10 + width(plate.name, "serif-bold", 15) + 6
     most = left + plate.width - 8
     if not plate.attributes:
         return
