@@ -507,18 +507,17 @@ class Window(QMainWindow):
         a, b = (d.formulation for d in drafts)
         catalog, sheet = self.bench.sheet.catalog, self.bench.sheet
         assert a is not None and b is not None
+        names = (drafts[0].letter, drafts[1].letter)
 
-        def task(cancel: threading.Event, progress: Callable[[float, str], None]) -> object:
+        def task(cancel: threading.Event, progress: Report) -> Verdict:
             progress(0.0, "proving, then looking for a difference")
-            return compare(a, b, catalog, 10.0, cancel)
+            return compare(a, b, catalog, 10.0, cancel, names)
 
-        def then(result: object) -> None:
-            assert isinstance(result, Verdict)
+        def then(result: Verdict) -> None:
             if self.bench.sheet is not sheet:
                 self.say("the formulations have changed since; compare again")
                 return
-            names = (drafts[0].letter, drafts[1].letter)
-            sentence = result.sentence.replace("A ", f"{names[0]} ", 1).replace(" B ", f" {names[1]} ", 1)
+            sentence = result.sentence
             self.bench.amend(verdict=sentence)
             self.below.show_verdict(result)
             self.show_verdict()

@@ -186,21 +186,31 @@ def _witness_html(verdict: Verdict, soft: str) -> str:
         if facts is None:
             continue
         parts.append(_table(facts.name, [a.name for a in facts.attributes], rows, soft))
-    parts.append(_table("A gives", list(witness.columns), witness.result_a, soft))
-    parts.append(_table("B gives", list(witness.columns), witness.result_b, soft))
+    parts.append(_table(f"{verdict.names[0]} gives", list(witness.columns), witness.result_a, soft))
+    parts.append(_table(f"{verdict.names[1]} gives", list(witness.columns), witness.result_b, soft))
     return "<table><tr>" + "".join(f"<td style='padding-right:24px'>{part}</td>" for part in parts) + "</tr></table>"
 
 
+def _solid(text: str) -> str:
+    """Text that is not broken across lines."""
+    return escape(text).replace(" ", "&nbsp;").replace("_", "_\u2060").replace("-", "-\u2060")
+
+
 def _table(title: str, names: list[str], rows: object, soft: str) -> str:
-    head = "".join(f"<th align='left' style='color:{soft}; padding-right:8px'>{escape(n)}</th>" for n in names)
+    head = "".join(
+        f"<th align='left' style='color:{soft}; padding-right:8px; white-space:nowrap'>{_solid(n)}</th>" for n in names
+    )
     body = "".join(
         "<tr>"
-        + "".join(f"<td style='padding-right:8px'>{'NULL' if v is None else escape(str(v))}</td>" for v in row)
+        + "".join(
+            f"<td style='padding-right:8px; white-space:nowrap'>{'NULL' if v is None else _solid(str(v))}</td>"
+            for v in row
+        )
         + "</tr>"
         for row in rows  # type: ignore[attr-defined]
     )
     empty = "" if body else f"<tr><td style='color:{soft}'>no rows</td></tr>"
-    return f"<p><b>{escape(title)}</b></p><table cellspacing='0'><tr>{head}</tr>{body}{empty}</table>"
+    return f"<p><b>{_solid(title)}</b></p><table cellspacing='0'><tr>{head}</tr>{body}{empty}</table>"
 
 
 def _tree(name: str, columns: list[str]) -> QTreeWidget:

@@ -40,17 +40,19 @@ class Verdict:
     instances: int = 0
     seconds: float = 0.0
     dialect: str = "duckdb"
+    names: tuple[str, str] = ("A", "B")
 
     @property
     def sentence(self) -> str:
         """The verdict in one line."""
+        a, b = self.names
         if self.kind is Kind.EQUAL:
-            return "A ≡ B  proved (as bags, NULLs and duplicates counted)"
+            return f"{a} ≡ {b}  proved (as bags, NULLs and duplicates counted)"
         if self.kind is Kind.DIFFERENT:
             if self.witness is None:
-                return f"A ≢ B  {self.reasons[0]}"
+                return f"{a} ≢ {b}  {self.reasons[0]}"
             count = self.witness.rows
-            return f"A ≢ B  shown by a witness of {count} row{'' if count == 1 else 's'}"
+            return f"{a} ≢ {b}  shown by a witness of {count} row{'' if count == 1 else 's'}"
         return f"no difference found in {self.instances:,} instances ({self.seconds:.1f} s); not proved"
 
 
@@ -60,59 +62,88 @@ def compare(
     catalog: Catalog,
     seconds: float = 10.0,
     cancel: threading.Event | None = None,
+    names: tuple[str, str] = ("A", "B"),
 ) -> Verdict:
-    """Tries to prove the two equal, then to show them different, and says how far it got. Never a guess."""
+    """Tries to prove the two equal, then to show them different, and says how far it got. Never a guess.
+
+    `names` are what the verdict calls the two.
+    """
     started = time.monotonic()
-    asides = tuple(_asides(a, b))
+    asides = tuple(_asides(a, b, names))
     rests = tuple(_rests_on((a, b)))
     widths = [len(f.outputs[-1].columns) for f in (a, b)]
     if widths[0] != widths[1]:
-        reason = f"A has {widths[0]} columns, B has {widths[1]}"
-        return Verdict(Kind.DIFFERENT, (reason,), asides=asides, rests_on=rests)
+        reason = f"{names[0]} has {widths[0]} columns, {names[1]} has {widths[1]}"
+        return Verdict(Kind.DIFFERENT, (reason,), asides=asides, rests_on=rests, names=names)
     if any(volatile(*scalars(op)) for f in (a, b) for op in f.operators()):
         reason = "a function differs from call to call, so no two runs need agree: nothing is claimed"
-        return Verdict(Kind.NO_DIFFERENCE, (reason,), asides=asides, rests_on=rests)
-    first = normal_form(a, catalog, "A", seconds / 4, cancel)
-    second = normal_form(b, catalog, "B", seconds / 4, cancel)
+        return Verdict(Kind.NO_DIFFERENCE, (reason,), asides=asides, rests_on=rests, names=names)
+    first = normal_form(a, catalog, names[0], seconds / 4, cancel)
+    second = normal_form(b, catalog, names[1], seconds / 4, cancel)
     if first.text is not None and first.text == second.text:
         # A proof speaks of meaning; both texts must also run.
-        problem = search(a, b, catalog, 0.0).notes
+        problem = search(a, b, catalog, 0.0, names=names).notes
         broken = [note for note in problem if "does not run" in note]
         if not broken:
-            return _equal(first, second, asides, rests, time.monotonic() - started)
-        return Verdict(Kind.NO_DIFFERENCE, tuple(broken), asides=asides, rests_on=rests)
+            return _equal(first, second, asides, rests, time.monotonic() - started, names)
+        return Verdict(Kind.NO_DIFFERENCE, tuple(broken), asides=asides, rests_on=rests, names=names)
     left = max(1.0, seconds - (time.monotonic() - started))
-    return _searched(search(a, b, catalog, left, cancel), first, second, asides, rests)
+    return _searched(search(a, b, catalog, left, cancel, names=names), first, second, asides, rests, names)
 
 
-def _equal(first: Normal, second: Normal, asides: tuple[str, ...], rests: tuple[str, ...], seconds: float) -> Verdict:
+def _equal(
+    first: Normal,
+    second: Normal,
+    asides: tuple[str, ...],
+    rests: tuple[str, ...],
+    seconds: float,
+    names: tuple[str, str],
+) -> Verdict:
+    a, b = names
     steps = (*first.steps, *second.steps)
     reasons = []
     if steps:
-        reasons.append(f"{len(first.steps)} rewrites of A and {len(second.steps)} of B lead to the same normal form")
+        reasons.append(
+            f"{len(first.steps)} rewrites of {a} and {len(second.steps)} of {b} lead to the same normal form"
+        )
     else:
         reasons.append("the two have the same normal form: they differ in names and order of writing only")
-    last = ProofStep("A = B", "same normal form", "", "equal up to names and the order of inputs and conditions")
-    return Verdict(Kind.EQUAL, tuple(reasons), (*steps, last), rests_on=rests, asides=asides, seconds=seconds)
+    last = ProofStep(f"{a} = {b}", "same normal form", "", "equal up to names and the order of inputs and conditions")
+    return Verdict(
+        Kind.EQUAL, tuple(reasons), (*steps, last), rests_on=rests, asides=asides, seconds=seconds, names=names
+    )
 
 
-def _searched(found: Search, first: Normal, second: Normal, asides: tuple[str, ...], rests: tuple[str, ...]) -> Verdict:
+def _searched(
+    found: Search,
+    first: Normal,
+    second: Normal,
+    asides: tuple[str, ...],
+    rests: tuple[str, ...],
+    names: tuple[str, str],
+) -> Verdict:
+    a, b = names
     rests = (*rests, *(n for n in found.notes if "does not run" not in n))
     if found.witness is not None:
         w = found.witness
-        reason = f"on these {w.rows} rows A gives {len(w.result_a)} rows and B {len(w.result_b)}: {len(w.only_a)} only in A, {len(w.only_b)} only in B"
-        return Verdict(Kind.DIFFERENT, (reason,), (), w, rests, asides, found.instances, found.seconds)
+        reason = (
+            f"on these {w.rows} rows {a} gives {len(w.result_a)} rows and {b} {len(w.result_b)}: "
+            f"{len(w.only_a)} only in {a}, {len(w.only_b)} only in {b}"
+        )
+        return Verdict(Kind.DIFFERENT, (reason,), (), w, rests, asides, found.instances, found.seconds, names=names)
     reasons = [note for note in found.notes if "does not run" in note]
-    for side, normal in (("A", first), ("B", second)):
+    for side, normal in ((a, first), (b, second)):
         if normal.text is None:
             reasons.append(f"{side} has no normal form: {normal.why}")
     if not reasons:
         reasons.append("the normal forms differ, which proves nothing")
     reasons.append(f"{found.instances:,} instances of up to {found.most_rows} rows a relation gave the same")
-    return Verdict(Kind.NO_DIFFERENCE, tuple(reasons), (), None, rests, asides, found.instances, found.seconds)
+    return Verdict(
+        Kind.NO_DIFFERENCE, tuple(reasons), (), None, rests, asides, found.instances, found.seconds, names=names
+    )
 
 
-def _asides(a: Formulation, b: Formulation) -> list[str]:
+def _asides(a: Formulation, b: Formulation, letters: tuple[str, str]) -> list[str]:
     """Differences that are not of rows."""
     found = []
     names = [[name for _, name in f.outputs[-1].columns] for f in (a, b)]
@@ -122,7 +153,7 @@ def _asides(a: Formulation, b: Formulation) -> list[str]:
             found.append(f"other column names: {', '.join(other)}")
     ordered = [isinstance(_below_limit(f), Sort) for f in (a, b)]
     if ordered[0] != ordered[1]:
-        found.append(f"only {'A' if ordered[0] else 'B'} orders its answer")
+        found.append(f"only {letters[0] if ordered[0] else letters[1]} orders its answer")
     elif all(ordered):
         found.append("both order their answer; rows are compared as bags, the order is not")
     return found

@@ -15,7 +15,7 @@ from typing import Any
 from core.algebra.formulation import Formulation
 from core.algebra.functions import ORDER_SENSITIVE, RANKING
 from core.algebra.graph import scalars
-from core.algebra.operators import Limit
+from core.algebra.operators import Limit, Relation
 from core.algebra.scalars import Aggregate, walk
 from core.catalog.ddl import in_reference_order
 from core.catalog.model import Catalog, RelationFacts
@@ -83,6 +83,7 @@ class Trials:
     def __init__(self, a: Formulation, b: Formulation, catalog: Catalog) -> None:
         self.catalog, self.notes = schema_of((a, b), catalog)
         self.order: list[RelationFacts] = in_reference_order(self.catalog)
+        self.read = {o.name.lower() for f in (a, b) for o in f.operators() if isinstance(o, Relation)}
         self.statements = (statement(a), statement(b))
         self.shaky = order_sensitive(a) or order_sensitive(b)
         self.engine = DuckEngine(memory_limit="1GB", threads=1)
@@ -90,14 +91,14 @@ class Trials:
         self.engine.load(table_scripts(self.catalog))
         self.columns: tuple[str, ...] = ()
 
-    def check(self) -> str:
+    def check(self, names: tuple[str, str] = ("A", "B")) -> str:
         """Why a side does not run at all, or an empty string."""
-        for name, sql in zip("AB", self.statements, strict=True):
+        for i, sql in enumerate(self.statements):
             try:
-                self.columns = self.engine.run(sql).names if name == "A" else self.columns
-                self.engine.run(sql)
+                shown = self.engine.run(sql).names
+                self.columns = self.columns or shown
             except EngineError as error:
-                return f"{name} does not run: {str(error).splitlines()[0]}"
+                return f"{names[i]} does not run: {str(error).splitlines()[0]}"
         return ""
 
     def fill(self, data: Data) -> bool:
@@ -160,12 +161,13 @@ def search(
     seconds: float,
     cancel: threading.Event | None = None,
     seed: int = 1,
+    names: tuple[str, str] = ("A", "B"),
 ) -> Search:
     """Looks for a witness for so many seconds. The instances grow slowly: small ones are read more easily."""
     started = time.monotonic()
     trials = Trials(a, b, catalog)
     try:
-        problem = trials.check()
+        problem = trials.check(names)
         if problem:
             return Search(None, 0, 0, 0.0, (*trials.notes, problem))
         rng, pools = random.Random(seed), Pools((a, b))
@@ -245,7 +247,7 @@ def _confirmed(trials: Trials, data: Data) -> Witness | None:
     first, second = bag(a), bag(b)
     if first == second:
         return None
-    shown = {name: rows for name, rows in data.items() if rows or trials.catalog.relation(name) is not None}
+    shown = {name: rows for name, rows in data.items() if rows or name in trials.read}
     return Witness(
         trials.catalog,
         shown,
