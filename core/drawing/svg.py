@@ -3,13 +3,18 @@
 from __future__ import annotations
 
 import base64
+import binascii
+import zlib
 from collections.abc import Iterable
+from functools import cache
 from xml.sax.saxutils import escape, quoteattr
 
 from core.drawing.display import Circle, DisplayList, Item, Line, Shape, Text
 from core.drawing.metrics import FONTS, runs, width
 from core.drawing.palette import Palette
+from core.drawing.woff import packed
 
+_CARRIED = '<metadata id="planimeter-sheet">'
 _FAMILIES = {
     "serif": ("Planimeter Serif", "normal", "normal"),
     "serif-bold": ("Planimeter Serif", "bold", "normal"),
@@ -34,7 +39,7 @@ def to_svg(display: DisplayList, palette: Palette, margin: float = 0.0, payload:
         f'<desc id="description">{escape(display.description or display.title or "Query plan")}</desc>',
     ]
     if payload:
-        parts.append(f'<metadata id="planimeter-sheet">{base64.b64encode(payload).decode()}</metadata>')
+        parts.append(f"{_CARRIED}{base64.b64encode(zlib.compress(payload)).decode()}</metadata>")
     parts.append(f"<style>{''.join(_font(face) for face in used)}text{{white-space:pre}}</style>")
     parts.append(
         f'<rect x="{_n(left)}" y="{_n(top)}" width="{_n(right - left)}" height="{_n(bottom - top)}" fill="{palette["paper"]}"/>'
@@ -48,12 +53,13 @@ def _n(value: float) -> str:
     return f"{value:.2f}".rstrip("0").rstrip(".")
 
 
+@cache
 def _font(face: str) -> str:
     family, weight, style = _FAMILIES[face]
-    data = base64.b64encode((FONTS / f"{face}.ttf").read_bytes()).decode()
+    data = base64.b64encode(packed((FONTS / f"{face}.ttf").read_bytes())).decode()
     return (
         f"@font-face{{font-family:'{family}';font-weight:{weight};font-style:{style};"
-        f"src:url(data:font/ttf;base64,{data}) format('truetype')}}"
+        f"src:url(data:font/woff;base64,{data}) format('woff')}}"
     )
 
 
@@ -96,9 +102,12 @@ def _text(item: Text, palette: Palette) -> Iterable[str]:
 
 
 def payload_of(svg: str) -> bytes | None:
-    """The sheet file that an exported SVG carries, or None."""
-    start = svg.find('<metadata id="planimeter-sheet">')
+    """The sheet file that an exported SVG carries, or None. ValueError where what it carries is damaged."""
+    start = svg.find(_CARRIED)
     if start < 0:
         return None
-    start = svg.index(">", start) + 1
-    return base64.b64decode(svg[start : svg.index("</metadata>", start)])
+    try:
+        text = svg[start + len(_CARRIED) : svg.index("</metadata>", start)]
+        return zlib.decompress(base64.b64decode(text, validate=True))
+    except (binascii.Error, zlib.error, ValueError) as error:
+        raise ValueError("the sheet in this drawing is damaged") from error
