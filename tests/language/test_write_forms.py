@@ -248,10 +248,11 @@ def test_set_operations_may_take_a_column_twice() -> None:
     a, b, _ = r.attributes
     c, e, _ = s.attributes
     for sources in (((a, a), (c, e)), ((a, b), (c, c))):
-        own = (fresh("x", INTEGER), fresh("y", INTEGER))
-        meant(SetOperation(SetKind.UNION, (r, s), sources, own, False))
-        own = (fresh("x", INTEGER), fresh("y", INTEGER))
-        meant(SetOperation(SetKind.EXCEPT, (r, s), sources, own, False))
+        for kind in SetKind:
+            own = (fresh("x", INTEGER), fresh("y", INTEGER))
+            both = SetOperation(kind, (r, s), sources, own, False)
+            meant(Select(both, greater(Ref(own[0]), Ref(own[1]))))
+            meant(Select(both, IsNull(Ref(own[1]))))
 
 
 def test_a_union_of_several_is_flat() -> None:
@@ -398,3 +399,11 @@ def test_columns_of_the_answer_keep_their_names_and_may_repeat() -> None:
     root = Sort(r, (SortKey(Ref(b)),))
     formulation = Formulation((Output("answer", root, ((a, "first"), (a, "Second Time"))),))
     assert write_sql(formulation, pretty=False) == 'SELECT a AS first, a AS "Second Time" FROM r ORDER BY b'
+
+
+def test_a_derived_table_lists_what_is_read_and_a_named_one_what_it_was_given() -> None:
+    r = relation("r")
+    limited = Limit(Sort(r, tuple(SortKey(Ref(a)) for a in r.attributes)), number(2))
+    root = kept(Select(limited, greater(Ref(r.attributes[1]), number(0))), r.attributes[0])
+    assert meant(root) == ("SELECT a FROM (SELECT a, b FROM r ORDER BY a, b, d LIMIT 2) AS r WHERE b > 0")
+    assert "(SELECT a, b, d FROM r ORDER BY a, b, d LIMIT 2) AS best" in meant(root, {}, {limited: "best"})

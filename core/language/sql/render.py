@@ -35,6 +35,7 @@ from core.language.sql.blocks import (
     derived,
 )
 from core.language.sql.gather import leaves, reads_aggregates, reads_terms, unique_names
+from core.language.sql.prune import slimmed
 from core.language.sql.write_dialect import WriteError
 from core.language.sql.write_scalars import chained, within, write_scalar, written_terms
 
@@ -179,6 +180,7 @@ def _unalias(query: exp.Query) -> exp.Query:
 
 def _view(block: Block, outer: View | None) -> View:
     """Chooses the aliases of the block's items, apart from each other and from those of the blocks around."""
+    slimmed(block)
     view = View(block, outer)
     taken = set() if outer is None else outer.around()
     _place(block.items, view, taken)

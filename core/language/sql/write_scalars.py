@@ -225,7 +225,7 @@ def _call(node: Call, naming: Naming) -> exp.Expression:
 
 
 def _named_call(name: str, arguments: list[exp.Expression]) -> exp.Expression:
-    return cast(exp.Expression, exp.func(name, *arguments, dialect="duckdb"))
+    return cast(exp.Expression, exp.func(name, *arguments, copy=False, dialect="duckdb"))
 
 
 def _aggregate(node: Aggregate, naming: Naming) -> exp.Expression:
