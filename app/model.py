@@ -331,7 +331,7 @@ class Workbench(QObject):
         statistics = f"{', '.join(words) or 'none'}{', ' + dates[-1] if dates else ''}"
         return [
             ("statistics", statistics),
-            ("data", Path(self.sheet.data).name if self.sheet.data else "none"),
+            ("data", Path(self.sheet.data).resolve().name if self.sheet.data else "none"),
             ("site", self.sheet.site),
             ("drawn by", self.sheet.author or "–"),
             ("date", self.sheet.created.isoformat()),
