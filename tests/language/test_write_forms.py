@@ -240,7 +240,7 @@ def test_an_aggregate_over_outer_columns_stays_in_its_query() -> None:
     r, s = relation("r"), relation("s")
     total = AggregateColumn(fresh("total", BIGINT), Aggregate("max", (Ref(r.attributes[0]),), BIGINT))
     root = Join(JoinKind.INNER, r, Group(s, (), (total,)), TRUE)
-    assert "max(a_2) AS total FROM (" in meant(root)
+    assert "LATERAL (SELECT max(a) AS total FROM (SELECT r.a FROM s" in meant(root)
 
 
 def test_set_operations_may_take_a_column_twice() -> None:
