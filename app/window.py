@@ -29,7 +29,7 @@ from app import demo_sheet
 from app.actions import ENTRIES
 from app.canvas.view import Canvas
 from app.editor import Editor
-from app.export.files import KINDS, carried, export, to_image
+from app.export.files import KINDS, ExportError, carried, export, to_image
 from app.fonts import font
 from app.model import Workbench
 from app.panels.below import Below
@@ -243,7 +243,7 @@ class Window(QMainWindow):
                 self._open_sql(path)
             else:
                 self.read_data(path)
-        except (SheetError, CatalogError, OSError, UnicodeDecodeError) as error:
+        except (SheetError, CatalogError, ExportError, OSError, UnicodeDecodeError) as error:
             self.complain(str(error))
 
     def _open_sql(self, path: Path) -> None:
