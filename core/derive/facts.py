@@ -7,7 +7,7 @@ Paulley, Larson, ICDE 1994.
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Mapping
+from collections.abc import Iterable, Iterator, Mapping
 from dataclasses import dataclass
 from weakref import WeakKeyDictionary
 
@@ -40,13 +40,17 @@ from core.algebra.scalars import (
     Attribute,
     Comparison,
     ComparisonOperator,
+    InList,
     Literal,
     Ref,
     Scalar,
+    WindowCall,
     conjuncts,
     refs,
 )
+from core.algebra.typing import type_of
 from core.catalog.model import Catalog
+from core.derive.comparing import decides, one_value
 from core.derive.reject import can_be_null, rejects_null_each
 
 Key = frozenset[Attribute]
@@ -294,7 +298,8 @@ class Facts:
                 case Comparison(operator=ComparisonOperator.EQUAL, left=a, right=b):
                     for mine, theirs in ((a, b), (b, a)):
                         if isinstance(mine, Ref) and mine.attribute in other and not refs(theirs) & other:
-                            fixed.add(mine.attribute)
+                            if decides(type_of(theirs), mine.attribute.type) and not volatile(theirs):
+                                fixed.add(mine.attribute)
         reach = closure(fixed, found)
         return any(key <= reach for key in found.keys)
 
@@ -309,14 +314,17 @@ class Facts:
             frozenset(mine for mine, a in zip(operator.attributes, source, strict=True) if a in part.never_null)
             for part, source in zip(parts, operator.sources, strict=True)
         ]
-        names = dict(zip(operator.sources[0], operator.attributes, strict=True))
+        pairs = zip(operator.sources[0], operator.attributes, strict=True)
+        # A column that is cast to the common type may lose what told its values apart.
+        names = {source: mine for source, mine in pairs if decides(mine.type, source.type)}
         keys: set[Key] = {frozenset(operator.attributes)} if operator.distinct else set()
         if operator.kind is SetKind.UNION:
             never_null = frozenset.intersection(*sure)
         else:
             never_null = sure[0] | sure[1] if operator.kind is SetKind.INTERSECT else sure[0]
             keys |= {k for key in parts[0].keys if (k := _moved(key, names, parts[0])) is not None}
-        return Properties(frozenset(sorted(keys, key=len)[:_MOST_KEYS]), never_null)
+        result = Properties(never_null=never_null)
+        return _replaced(result, keys=_minimal(keys, result))
 
     def _group(self, operator: Group) -> Properties:
         found = self.of(operator.input)
@@ -365,12 +373,18 @@ class Facts:
         never_null, keys = set(found.never_null), set(found.keys)
         for column in operator.columns:
             call = column.call
-            if call.function.name in NEVER_NULL:
+            if call.function.name in NEVER_NULL or self._over_itself(call, found):
                 never_null.add(column.attribute)
             if call.function.name == "row_number" and all(isinstance(p, Ref) for p in call.partition):
                 keys.add(refs(*call.partition) | {column.attribute})
         result = _replaced(found, never_null=frozenset(never_null))
         return _replaced(result, keys=_minimal(keys, result))
+
+    def _over_itself(self, call: WindowCall, found: Properties) -> bool:
+        """Whether the function sees at least the row's own value, and that is not NULL: the default frame holds it."""
+        function = call.function
+        plain = call.frame is None and function.condition is None and function.name in ("sum", "avg", "min", "max")
+        return plain and not can_be_null(function.arguments[0], found.never_null)
 
 
 def _replaced(
@@ -392,32 +406,36 @@ def _replaced(
 
 def _restricted(found: Properties, condition: Scalar, own: Key) -> Properties:
     """The facts after keeping the rows for which the condition is true."""
-    same, constants = list(found.same), set(found.constants)
+    same, constants, decided = list(found.same), set(found.constants), set(found.dependencies)
+    for left, right in _equations(condition):
+        if isinstance(left, Ref) and isinstance(right, Ref) and {left.attribute, right.attribute} <= own:
+            a, b = left.attribute, right.attribute
+            if a.type.family is b.type.family and one_value(a.type, b.type):
+                same.append(frozenset({a, b}))
+                continue
+            decided |= {(frozenset({x}), frozenset({y})) for x, y in ((a, b), (b, a)) if decides(x.type, y.type)}
+            continue
+        for side, other in ((left, right), (right, left)):
+            if isinstance(side, Ref) and side.attribute in own and not refs(other) & own and not volatile(other):
+                if decides(type_of(other), side.attribute.type):
+                    constants.add(side.attribute)
+    never_null = found.never_null | (rejects_null_each(condition, found.never_null) & own)
+    result = Properties(found.keys, never_null, frozenset(decided), _merged(same), frozenset(constants))
+    return _replaced(result, keys=_minimal(result.keys, result))
+
+
+def _equations(condition: Scalar) -> Iterator[tuple[Scalar, Scalar]]:
+    """The pairs of scalars that are not distinct wherever the condition is true."""
     for term in conjuncts(condition):
         match term:
             case Comparison(
-                operator=ComparisonOperator.EQUAL | ComparisonOperator.NOT_DISTINCT,
-                left=Ref(attribute=a),
-                right=Ref(attribute=b),
-            ):
-                if a in own and b in own:
-                    same.append(frozenset({a, b}))
-                else:
-                    constants.update({a, b} & own)
-            case Comparison(
                 operator=ComparisonOperator.EQUAL | ComparisonOperator.NOT_DISTINCT, left=left, right=right
             ):
-                for side, other in ((left, right), (right, left)):
-                    if (
-                        isinstance(side, Ref)
-                        and side.attribute in own
-                        and not refs(other) & own
-                        and not volatile(other)
-                    ):
-                        constants.add(side.attribute)
-    never_null = found.never_null | (rejects_null_each(condition, found.never_null) & own)
-    result = Properties(found.keys, never_null, found.dependencies, _merged(same), frozenset(constants))
-    return _replaced(result, keys=_minimal(result.keys, result))
+                yield left, right
+            case InList(term=left, items=(right,)):
+                yield left, right
+            case _:
+                pass
 
 
 def closure(given: Iterable[Attribute], found: Properties) -> Key:

@@ -9,6 +9,7 @@ from __future__ import annotations
 from collections.abc import Iterable, Mapping
 from dataclasses import dataclass, field
 
+from core.algebra.functions import volatile
 from core.algebra.graph import attributes, free
 from core.algebra.operators import (
     Distinct,
@@ -43,7 +44,9 @@ from core.algebra.scalars import (
     Scalar,
     conjuncts,
 )
+from core.algebra.typing import type_of
 from core.catalog.model import Catalog
+from core.derive.comparing import decides, one_value
 from core.derive.facts import Facts
 
 
@@ -171,7 +174,9 @@ def _select(below: Bounds, condition: Scalar, facts: Facts, operator: Select) ->
             case Comparison(operator=ComparisonOperator.EQUAL, left=left, right=right):
                 own = set(attributes(operator.input))
                 for side, other in ((left, right), (right, left)):
-                    if isinstance(side, Ref) and side.attribute in own and not _reads(other, own):
+                    if not isinstance(side, Ref) or side.attribute not in own or _reads(other, own):
+                        continue
+                    if decides(type_of(other), side.attribute.type) and not volatile(other):
                         distinct[side.attribute] = 1
                         degree = below.degree.get(side.attribute)
                         if degree is not None and (high is None or degree < high):
@@ -192,11 +197,13 @@ def _moved(below: Bounds, names: Mapping[Attribute, Attribute]) -> Bounds:
 
 
 def equalities(condition: Scalar, left: set[Attribute], right: set[Attribute]) -> list[tuple[Attribute, Attribute]]:
-    """The pairs of attributes (left, right) that a join condition equates."""
+    """The pairs of attributes (left, right) that a join condition equates, value for value."""
     pairs = []
     for term in conjuncts(condition):
         match term:
             case Comparison(operator=ComparisonOperator.EQUAL, left=Ref(attribute=a), right=Ref(attribute=b)):
+                if not one_value(a.type, b.type):
+                    continue
                 if a in left and b in right:
                     pairs.append((a, b))
                 elif b in left and a in right:
