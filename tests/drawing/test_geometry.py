@@ -33,10 +33,22 @@ def random_size(rng: random.Random) -> Size:
     return Size(rows, low, high, rows * 8, rng.choice(list(Evidence)), (), "", measured)
 
 
+def shared_query(rng: random.Random) -> str:
+    """Steps that several others read: the drawing is a graph."""
+    steps = ["x0 as (select a, b from t where h > 0)"]
+    for i in range(1, rng.randint(2, 4)):
+        one, other = rng.randrange(i), rng.randrange(i)
+        kind = rng.choice(["join", "left join", "full join"])
+        steps.append(f"x{i} as (select p.a, q.b from x{one} p {kind} x{other} q on p.a = q.b)")
+    last = len(steps) - 1
+    return f"with {', '.join(steps)} select p.a, q.b from x{last} p join x{rng.randint(0, last)} q on p.a = q.a join x0 z on z.a = q.a"
+
+
 def random_column(rng: random.Random, letter: str, first: int) -> tuple[Column, PlanDrawing, int] | None:
     catalog = catalog_from_ddl(SCHEMA)
+    text = shared_query(rng) if rng.random() < 0.25 else random_query(rng.randrange(1 << 30), rng.randint(1, 3))[0]
     try:
-        formulation = read_sql(random_query(rng.randrange(1 << 30), rng.randint(1, 3))[0], catalog)
+        formulation = read_sql(text, catalog)
     except ReadError:
         return None
     operators = formulation.operators()
