@@ -3,59 +3,48 @@
 from __future__ import annotations
 
 import sys
-import threading
-from collections.abc import Callable
 from pathlib import Path
 
 from PySide6.QtCore import QMimeData, Qt, QTimer
 from PySide6.QtGui import QAction, QCloseEvent, QDragEnterEvent, QDropEvent, QGuiApplication, QKeySequence
 from PySide6.QtWidgets import (
     QApplication,
-    QDialog,
     QDockWidget,
     QFileDialog,
     QInputDialog,
     QLabel,
-    QLineEdit,
-    QListWidget,
     QMainWindow,
     QMessageBox,
     QProgressBar,
-    QVBoxLayout,
     QWidget,
 )
 
-from app import demo_sheet
+from app import demo_sheet, tasks
 from app.actions import ENTRIES
 from app.canvas.view import Canvas
+from app.command_search import CommandSearch
 from app.editor import Editor
 from app.export.files import KINDS, ExportError, carried, export, to_image
 from app.fonts import font
 from app.model import Workbench
 from app.panels.below import Below
 from app.panels.operator import OperatorPanel
+from app.tasks import Counted, Profiled
 from app.theme import qt_palette, style_sheet, system_is_dark
 from app.work import Worker
 from core.algebra.notation import tree_text
-from core.algebra.operators import Operator
 from core.catalog.ddl import CatalogError, catalog_from_ddl
 from core.catalog.files import load_catalog
 from core.catalog.model import Catalog
-from core.compare import Verdict, compare
+from core.compare import Verdict
 from core.drawing.page import CAUTION
 from core.drawing.palette import PALETTES
-from core.engine.duckdb_engine import DuckEngine, EngineError
-from core.engine.measure import measure
-from core.engine.profile import profile
+from core.engine.duckdb_engine import EngineError
 from core.rewrite.improve import Revision as Step
-from core.rewrite.improve import improve
 from core.sheet import edit
 from core.sheet.document import new_sheet
 from core.sheet.file import SheetError, from_json
 
-Report = Callable[[float, str], None]
-Profiled = tuple[Catalog, list[str]]
-Counted = tuple[dict[Operator, int], dict[Operator, str]]
 SHEET_ENDING = ".planimeter"
 _DRAWINGS = "Drawings (*.svg *.pdf *.png)"
 
@@ -300,13 +289,6 @@ class Window(QMainWindow):
         """Profiles data and makes its catalog the sheet's."""
         declared = self.bench.sheet.catalog
 
-        def task(cancel: threading.Event, progress: Report) -> Profiled:
-            engine = DuckEngine.over(path)
-            try:
-                return profile(engine, declared, progress, cancel)
-            finally:
-                engine.close()
-
         def then(result: Profiled) -> None:
             from dataclasses import replace
 
@@ -316,7 +298,7 @@ class Window(QMainWindow):
             if notes:
                 self.say("; ".join(notes))
 
-        self.worker.start(f"profiling {path.name}", task, then)
+        self.worker.start(f"profiling {path.name}", tasks.profiling(path, declared), then)
 
     def save(self) -> None:
         if self.bench.path is None:
@@ -394,7 +376,7 @@ class Window(QMainWindow):
             self.bench.note(operator, text)
 
     def search_commands(self) -> None:
-        CommandSearch(self).exec()
+        CommandSearch(self, self.actions_by_method).exec()
 
     # --- query -------------------------------------------------------------------------------------------------------
 
@@ -420,37 +402,13 @@ class Window(QMainWindow):
         formulations = [d.formulation for d in sheet.drafts if d.formulation is not None]
         data = sheet.data
 
-        def task(cancel: threading.Event, progress: Report) -> Counted:
-            engine = DuckEngine.over(data)
-            counts: dict[Operator, int] = {}
-            reasons: dict[Operator, str] = {}
-            finished = threading.Event()
-
-            def interrupt() -> None:
-                while not finished.wait(0.05):
-                    if cancel.is_set():  # again and again: an interruption between two statements is lost
-                        engine.cancel()
-
-            watcher = threading.Thread(target=interrupt, name="measuring-interrupt", daemon=True)
-            watcher.start()
-            try:
-                for i, formulation in enumerate(formulations):
-                    found, why = measure(formulation, engine, _part_of(progress, i, len(formulations)), cancel, 20.0)
-                    counts.update(found)
-                    reasons.update(why)
-            finally:
-                finished.set()
-                watcher.join()
-                engine.close()
-            return counts, reasons
-
         def then(result: Counted) -> None:
             counts, reasons = result
             self.bench.amend(measured={**self.bench.sheet.measured, **counts})
             left = f"; {len(reasons)} could not be counted: {next(iter(reasons.values()))}" if reasons else ""
             self.say(f"{len(counts)} operators counted{left}")
 
-        self.worker.start("measuring", task, then)
+        self.worker.start("measuring", tasks.counting(data, formulations), then)
 
     def improve(self) -> None:
         """Searches the cheapest chain of rewrites, and puts it on the sheet as a second formulation's revisions."""
@@ -459,13 +417,10 @@ class Window(QMainWindow):
             return
         formulation, catalog, letter = draft.formulation, self.bench.sheet.catalog, draft.letter
 
-        def task(cancel: threading.Event, progress: Callable[[float, str], None]) -> object:
-            return improve(formulation, catalog, 6.0, cancel, progress)
-
         def then(result: object) -> None:
             self._take_chain(letter, result)  # type: ignore[arg-type]
 
-        self.worker.start("looking for a better formulation", task, then)
+        self.worker.start("looking for a better formulation", tasks.improving(formulation, catalog), then)
 
     def _take_chain(self, letter: str, chain: list[Step]) -> None:
         if not chain:
@@ -509,10 +464,6 @@ class Window(QMainWindow):
         assert a is not None and b is not None
         names = (drafts[0].letter, drafts[1].letter)
 
-        def task(cancel: threading.Event, progress: Report) -> Verdict:
-            progress(0.0, "proving, then looking for a difference")
-            return compare(a, b, catalog, 10.0, cancel, names)
-
         def then(result: Verdict) -> None:
             if self.bench.sheet is not sheet:
                 self.say("the formulations have changed since; compare again")
@@ -524,7 +475,7 @@ class Window(QMainWindow):
             self.say(sentence)
             self._update()
 
-        self.worker.start("comparing", task, then)
+        self.worker.start("comparing", tasks.comparing(a, b, catalog, names), then)
 
     def witness_dialog(self) -> None:
         verdict = self.below.verdict
@@ -623,52 +574,6 @@ class Window(QMainWindow):
         self.worker.cancel()
         self.worker.wait(2.0)
         event.accept()
-
-
-def _part_of(progress: Report, number: int, count: int) -> Report:
-    """Progress of one of several tasks, as a part of them all."""
-    return lambda share, text: progress((number + share) / count, text)
-
-
-class CommandSearch(QDialog):
-    """Type a few letters of a command's name; Return runs it."""
-
-    def __init__(self, window: Window) -> None:
-        super().__init__(window)
-        self.window_ = window
-        self.setWindowTitle("Commands")
-        self.resize(460, 380)
-        self.field = QLineEdit()
-        self.field.setPlaceholderText("a few letters of a command")
-        self.list = QListWidget()
-        self.list.setFont(font("sans", 13))
-        layout = QVBoxLayout(self)
-        layout.addWidget(self.field)
-        layout.addWidget(self.list)
-        self.field.textChanged.connect(self.fill)
-        self.field.returnPressed.connect(self.run)
-        self.list.itemActivated.connect(lambda *_: self.run())
-        self.fill("")
-
-    def fill(self, text: str) -> None:
-        self.list.clear()
-        wanted = text.lower().split()
-        for entry in ENTRIES:
-            if all(word in f"{entry.menu} {entry.name}".lower() for word in wanted):
-                action = self.window_.actions_by_method[entry.method]
-                why = "" if action.isEnabled() else f"   needs {entry.needs}"
-                self.list.addItem(f"{entry.name}    {entry.shortcut}{why}")
-                self.list.item(self.list.count() - 1).setData(Qt.ItemDataRole.UserRole, entry.method)
-        self.list.setCurrentRow(0)
-
-    def run(self) -> None:
-        item = self.list.currentItem()
-        if item is None:
-            return
-        action = self.window_.actions_by_method[item.data(Qt.ItemDataRole.UserRole)]
-        if action.isEnabled():
-            self.accept()
-            QTimer.singleShot(0, action.trigger)
 
 
 def application() -> QApplication:

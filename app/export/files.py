@@ -54,7 +54,9 @@ def to_image(display: DisplayList, palette: Palette, dpi: int = 144) -> QImage:
     scale = dpi / 96
     wide, high = max(1, round((right - left) * scale)), max(1, round((bottom - top) * scale))
     if max(wide, high) > _MOST_SIDE or wide * high > _MOST_PIXELS:
-        raise ExportError(f"an image of {wide} × {high} pixels is too large: write it as .svg or .pdf, or with fewer dpi")
+        raise ExportError(
+            f"an image of {wide} × {high} pixels is too large: write it as .svg or .pdf, or with fewer dpi"
+        )
     image = QImage(wide, high, QImage.Format.Format_RGB32)
     if image.isNull():
         raise ExportError(f"there is no memory for an image of {wide} × {high} pixels")
