@@ -8,19 +8,10 @@ import subprocess
 import sys
 import threading
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass
 from functools import lru_cache
 
 Point = tuple[float, float]
 _WAIT = 8.0
-
-
-@dataclass(frozen=True, slots=True)
-class Placed:
-    """Centres of nodes, and the corners of each edge from the foot of a plate to the head of another."""
-
-    nodes: Mapping[str, Point]
-    edges: Sequence[Sequence[Point]]
 
 
 class _Worker:
@@ -66,17 +57,19 @@ class _Worker:
 _worker = _Worker()
 
 
-def place(sizes: Mapping[str, tuple[float, float]], edges: Sequence[tuple[str, str]]) -> Placed | None:
-    """Places nodes of these sizes; None where Graphviz cannot be had (the caller then draws a tree with references)."""
-    return _placed(json.dumps({"nodes": dict(sizes), "edges": list(edges)}), len(edges))
+def place(sizes: Mapping[str, tuple[float, float]], edges: Sequence[tuple[str, str]]) -> Mapping[str, Point] | None:
+    """The centres of nodes of these sizes; those of a row share their y.
+
+    None where Graphviz cannot be had (the caller then draws a tree with references).
+    """
+    return _placed(json.dumps({"nodes": dict(sizes), "edges": list(edges)}))
 
 
 @lru_cache(maxsize=64)
-def _placed(request: str, count: int) -> Placed | None:
+def _placed(request: str) -> Mapping[str, Point] | None:
     answer = _worker.ask(request)
     if answer is None:
         return None
-    nodes, bends = answer["nodes"], answer["edges"]
-    assert isinstance(nodes, dict) and isinstance(bends, dict)
-    corners = [tuple((float(x), float(y)) for x, y in bends.get(str(i), ())) for i in range(count)]
-    return Placed({name: (float(x), float(y)) for name, (x, y) in nodes.items()}, corners)
+    nodes = answer["nodes"]
+    assert isinstance(nodes, dict)
+    return {name: (float(x), float(y)) for name, (x, y) in nodes.items()}

@@ -12,12 +12,12 @@ from typing import Any
 
 
 def lay_out(request: dict[str, Any]) -> dict[str, Any]:
-    """Positions of node centres and the bends of edges, y downwards, in the units of the sizes given."""
+    """Positions of node centres, y downwards, in the units of the sizes given. Nodes of a row share their y."""
     import networkx
     from networkx.drawing.nx_agraph import to_agraph
 
     graph = networkx.MultiDiGraph()
-    graph.graph["graph"] = {"rankdir": "TB", "ordering": "out", "splines": "ortho", "nodesep": "0.4", "ranksep": "0.65"}
+    graph.graph["graph"] = {"rankdir": "TB", "ordering": "out", "splines": "line", "nodesep": "0.4", "ranksep": "0.65"}
     for name, (wide, high) in request["nodes"].items():
         graph.add_node(name, width=str(wide / 72), height=str(high / 72), fixedsize="true", shape="box", label="")
     for number, (above, below) in enumerate(request["edges"]):
@@ -25,23 +25,13 @@ def lay_out(request: dict[str, Any]) -> dict[str, Any]:
     drawn = to_agraph(graph)
     drawn.layout("dot")
     nodes = {str(node): _point(node.attr["pos"]) for node in drawn.nodes()}
-    edges = {edge.attr["id"]: _bends(edge.attr["pos"]) for edge in drawn.edges()}
     top = max((y for _, y in nodes.values()), default=0.0)
-    return {
-        "nodes": {name: (x, top - y) for name, (x, y) in nodes.items()},
-        "edges": {name: [(x, top - y) for x, y in points] for name, points in edges.items()},
-    }
+    return {"nodes": {name: (x, top - y) for name, (x, y) in nodes.items()}}
 
 
 def _point(text: str) -> tuple[float, float]:
     x, y = text.split(",")[:2]
     return float(x), float(y)
-
-
-def _bends(text: str) -> list[tuple[float, float]]:
-    """The corners of an orthogonal edge: the end points of its straight Bezier pieces."""
-    points = [_point(part) for part in text.split() if not part.startswith(("e,", "s,"))]
-    return points[::3] if len(points) > 3 else points
 
 
 def main() -> None:

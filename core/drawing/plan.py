@@ -15,6 +15,7 @@ from core.catalog.model import Catalog
 from core.drawing.display import ACCENT, INK, SOFT, Circle, DisplayList, Line, Text
 from core.drawing.graph_layout import place
 from core.drawing.plates import ANCHOR, Plate, draw_plate, plate_of
+from core.drawing.routes import Spot, routed
 from core.drawing.tidy import Node, lay_out
 from core.size import Size
 
@@ -138,13 +139,19 @@ def _draw_graph(
         return None
     out = DisplayList()
     by_owner = {owner: operator for operator, owner in owners.items()}
-    for (above, below), corners in zip(edges, placed.edges, strict=True):
+    rows = {y: row for row, y in enumerate(sorted({y for _, y in placed.values()}))}
+    spots = {}
+    for owner, plate in plates.items():
+        x, y = placed[owner]
+        wide = plate.width + room.get(owner, 0.0)
+        spots[owner] = Spot(rows[y], x - wide / 2, plate.width, wide, plate.height, ANCHOR)
+    ways = routed(spots, edges)
+    for (above, below), corners in zip(edges, ways.edges, strict=True):
         soft = by_owner[below] in shown.soft
         accent = by_owner[below] in shown.accent and by_owner[above] not in shown.soft
-        out.add(Line(tuple(corners), ACCENT if accent else SOFT if soft else INK, 1.8 if accent else 1.2))
+        out.add(Line(corners, ACCENT if accent else SOFT if soft else INK, 1.8 if accent else 1.2))
     for owner, plate in plates.items():
-        x, y = placed.nodes[owner]
-        out.extend(draw_plate(plate, x - (plate.width + room.get(owner, 0.0)) / 2, y - plate.height / 2, decades))
+        out.extend(draw_plate(plate, spots[owner].left, ways.tops[spots[owner].row], decades))
     _balloons(out, shown.balloons, owners)
     return PlanDrawing(out, by_owner, owners)
 
