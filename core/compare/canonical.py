@@ -49,6 +49,7 @@ from core.algebra.scalars import (
     Scalar,
     conjuncts,
 )
+from core.algebra.types import Family
 from core.compare.terms import Label, bounded_texts, term_text
 
 _MOST_ORDERS = 720
@@ -146,8 +147,23 @@ def _equates(condition: Scalar) -> bool:
     """Whether a condition equates two attributes of one type, so that one may stand for the other."""
     match condition:
         case Comparison(operator=ComparisonOperator.EQUAL, left=Ref(attribute=a), right=Ref(attribute=b)):
-            return a.type == b.type
+            return a.type == b.type and a.type.family in _ONE_VALUE
     return False
+
+
+_ONE_VALUE = frozenset(
+    {
+        Family.BOOLEAN,
+        Family.INTEGER,
+        Family.DECIMAL,
+        Family.TEXT,
+        Family.DATE,
+        Family.TIME,
+        Family.TIMESTAMP,
+        Family.UNKNOWN,
+    }
+)
+"""Families where equal values cannot be told apart. Others can: -0.0 = 0.0, and 30 days = 1 month, have other texts."""
 
 
 def _labels(cluster: Cluster, names: dict[Attribute, str], outer: Label) -> tuple[Label, list[str]]:
@@ -358,6 +374,8 @@ def _group(operator: Group, outer: Label) -> Leaf:
     sets = ""
     if operator.sets is not None:
         by_key = dict(zip(operator.keys, keys, strict=True))
+        if len(set(keys)) != len(keys):
+            raise NoForm("grouping sets over keys that are equal")
         sets = str(sorted(str(sorted(by_key[k] for k in part)) for part in operator.sets))
     head = f"group by {sorted(set(keys))} {sets}" if operator.keys or operator.sets is not None else "one group"
     return Leaf(digest(f"{head} of {text}"), names)
@@ -410,26 +428,20 @@ def _outer_join(operator: Join, outer: Label) -> Leaf:
 def _window(operator: Window, outer: Label) -> Leaf:
     kept = list(attributes(operator.input))
     calls = [c.call for c in operator.columns]
-    if any(c.call.function.name in _TIE_BREAKING for c in operator.columns):
-        raise NoForm("row numbers depend on how ties are broken")
     text, labels = _finished(operator.input, [*(Ref(a) for a in kept), *calls], outer)
     names = dict(zip(kept, labels[: len(kept)], strict=True))
     names.update({c.attribute: label for c, label in zip(operator.columns, labels[len(kept) :], strict=True)})
     return Leaf(digest(f"window over {text}"), names)
 
 
-_TIE_BREAKING = frozenset("row_number ntile lag lead first_value last_value nth_value first last".split())
-
-
 def _limit(operator: Limit, outer: Label) -> Leaf:
     below = operator.input
     kept = list(attributes(operator))
     keys: tuple[Node, ...] = ()
-    while isinstance(below, (Sort, Project)):
-        if isinstance(below, Sort):
-            keys = below.keys
-            break
+    while isinstance(below, (Project, Select)):
         below = below.input
+    if isinstance(below, Sort):
+        keys = below.keys
     text, labels = _finished(operator.input, [*(Ref(a) for a in kept), *keys], outer)
     bound = " ".join("-" if s is None else term_text(s, outer) for s in (operator.count, operator.offset))
     order = ", ".join(labels[len(kept) :])

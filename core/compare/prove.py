@@ -10,6 +10,7 @@ from core.algebra.formulation import Formulation
 from core.algebra.operators import Sort
 from core.catalog.model import Catalog
 from core.compare.canonical import NoForm, canonical
+from core.compare.settled import unsettled
 from core.derive.facts import Facts
 from core.rewrite import Offer, attempts, rule_named
 from core.rewrite.context import Context
@@ -86,9 +87,14 @@ def normal_form(
     while isinstance(root, Sort):
         root = root.input
     try:
+        why = unsettled(root, facts)
+        if why is not None:
+            return Normal(current, None, tuple(steps), why)
         text = canonical(root, [a for a, _ in output.columns])
     except NoForm as reason:
         return Normal(current, None, tuple(steps), str(reason))
+    except RecursionError:
+        return Normal(current, None, tuple(steps), "it is nested too deeply")
     return Normal(current, text, tuple(steps))
 
 

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import hashlib
 from collections.abc import Callable, Sequence
+from datetime import datetime, time
 from decimal import Decimal
 
 from core.algebra.scalars import (
@@ -32,9 +33,11 @@ from core.algebra.scalars import (
     Scalar,
     SortKey,
     WindowCall,
+    walk,
 )
 from core.algebra.types import Family
 from core.algebra.typing import type_of
+from core.catalog.model import Value
 from core.size.values import constant, number
 
 Label = Callable[[Attribute], str]
@@ -100,8 +103,6 @@ def term_text(node: Node, label: Label) -> str:
 def _literal(node: Literal) -> str:
     if node.text is None:
         return "NULL"
-    if node.type.family is Family.DECIMAL:
-        return f"decimal:{Decimal(node.text).normalize()}"
     return f"{node.type.family.value}:{node.text!r}"
 
 
@@ -129,7 +130,9 @@ def _closed(operator: ComparisonOperator, left: Scalar, right: Scalar) -> tuple[
 
 
 def _side(scalar: Scalar, label: Label) -> str:
-    """A side of a comparison; constant arithmetic on dates is done."""
+    """A side of a comparison; constant arithmetic on dates is done, and 1.50 is 1.5 (elsewhere the scale may show)."""
+    if isinstance(scalar, Literal) and scalar.type.family is Family.DECIMAL and scalar.text is not None:
+        return f"decimal:{Decimal(scalar.text).normalize()}"
     if isinstance(scalar, Arithmetic):
         value = constant(scalar)
         if value is not None and not isinstance(value, (int, float, Decimal)):
@@ -163,9 +166,9 @@ def _bound(term: Scalar, label: Label) -> tuple[str, str, float] | None:
     if not isinstance(term, Comparison) or term.operator in _SYMMETRIC:
         return None
     operator, left, right = term.operator, term.left, term.right
-    value = constant(right)
+    value = _bare_constant(right)
     if value is None:
-        operator, left, value = MIRRORED[operator], right, constant(left)
+        operator, left, value = MIRRORED[operator], right, _bare_constant(left)
     if value is None or isinstance(value, str):
         return None
     place = number(value)
@@ -173,6 +176,18 @@ def _bound(term: Scalar, label: Label) -> tuple[str, str, float] | None:
         return None
     side = "above" if operator in (ComparisonOperator.GREATER, ComparisonOperator.AT_LEAST) else "below"
     return side, term_text(left, label), place
+
+
+def _bare_constant(scalar: Scalar) -> Value | None:
+    """A constant whose place among others is sure: no cast of a number, which may round, and no time zone."""
+    if any(isinstance(node, Cast) and type_of(node.term).family is not Family.TEXT for node in walk(scalar)):
+        return None
+    value = constant(scalar)
+    aware = isinstance(value, (datetime, time)) and value.tzinfo is not None
+    zoned = any(
+        isinstance(n, (Cast, Literal)) and "TZ" in n.type.name.replace("WITH TIME ZONE", "TZ") for n in walk(scalar)
+    )
+    return None if aware or zoned else value
 
 
 def _disjunction(terms: Sequence[Scalar], label: Label) -> str:

@@ -16,7 +16,7 @@ from core.algebra.formulation import Formulation
 from core.algebra.functions import ORDER_SENSITIVE, RANKING
 from core.algebra.graph import scalars
 from core.algebra.operators import Limit, Relation
-from core.algebra.scalars import Aggregate, walk
+from core.algebra.scalars import Aggregate, Frame, walk
 from core.catalog.ddl import in_reference_order
 from core.catalog.model import Catalog, RelationFacts
 from core.compare.instances import Data, Pools, obeys, random_instance, schema_of
@@ -70,8 +70,10 @@ def order_sensitive(formulation: Formulation) -> bool:
         if isinstance(operator, Limit):
             return True
         for node in walk(*scalars(operator)):
+            if isinstance(node, Frame) and node.unit.lower() == "rows":
+                return True
             if isinstance(node, Aggregate) and node.name in (
-                ORDER_SENSITIVE | RANKING | {"lag", "lead", "first_value", "last_value", "nth_value"}
+                ORDER_SENSITIVE | RANKING | {"lag", "lead", "first_value", "last_value", "nth_value", "mode"}
             ):
                 return True
     return False
@@ -119,10 +121,7 @@ class Trials:
         """Both results, or None where the data is not admitted or a side stops with an error on it."""
         if not self.fill(data):
             return None
-        try:
-            return self.engine.run(self.statements[0]).rows, self.engine.run(self.statements[1]).rows
-        except EngineError:
-            return None
+        return both(self.engine, self.statements)
 
     def differs(self, data: Data) -> bool:
         """Whether the two differ as bags, whatever order the rows come in."""
@@ -141,6 +140,17 @@ class Trials:
         return True
 
 
+def both(engine: DuckEngine, statements: tuple[str, str]) -> tuple[list[tuple[Any, ...]], list[tuple[Any, ...]]] | None:
+    """Both results in one transaction, so that now() is the same moment; None where a side stops with an error."""
+    engine.run("BEGIN")
+    try:
+        return engine.run(statements[0]).rows, engine.run(statements[1]).rows
+    except EngineError:
+        return None
+    finally:
+        engine.run("ROLLBACK")
+
+
 def bag(rows: Sequence[tuple[Any, ...]]) -> Counter[tuple[Any, ...]]:
     return Counter(tuple(_plain(value) for value in row) for row in rows)
 
@@ -148,7 +158,8 @@ def bag(rows: Sequence[tuple[Any, ...]]) -> Counter[tuple[Any, ...]]:
 def _plain(value: Any) -> Any:
     """Values as they compare: floats to nine digits, numbers of one value alike, lists and structs by their text."""
     if isinstance(value, float):
-        return "nan" if value != value else float(f"{value:.9g}")
+        # What is left of a cancellation, such as 0.1 + 0.2 - 0.3, is no difference.
+        return "nan" if value != value else 0.0 if abs(value) < 1e-9 else float(f"{value:.9g}")
     if isinstance(value, (list, dict, set)):
         return repr(value)
     return value
@@ -239,11 +250,12 @@ def _confirmed(trials: Trials, data: Data) -> Witness | None:
     except EngineError:
         return None
     try:
-        a, b = (engine.run(sql).rows for sql in trials.statements)
-    except EngineError:
-        return None
+        found = both(engine, trials.statements)
     finally:
         engine.close()
+    if found is None:
+        return None
+    a, b = found
     first, second = bag(a), bag(b)
     if first == second:
         return None
