@@ -41,6 +41,7 @@ from core.algebra.scalars import (
     ComparisonOperator,
     IsNull,
     IsTruth,
+    Literal,
     Negative,
     Not,
     Or,
@@ -53,7 +54,7 @@ from core.algebra.scalars import (
     fresh_key,
     fresh_like,
 )
-from core.algebra.types import BIGINT, BOOLEAN, INTEGER, RELATION
+from core.algebra.types import BIGINT, BOOLEAN, INTEGER, RELATION, type_named
 from core.language.sql.write import WriteError, write_query, write_sql
 from tests.language.graphs import RELATIONS, GraphMaker, number
 from tests.language.test_write_graphs import INSTANCES, check
@@ -327,6 +328,15 @@ def test_nesting_and_unnesting() -> None:
     meant(Nest(r, (), (a, b), fresh("bag", RELATION)))
     with pytest.raises(WriteError, match="nested relation has no form in mysql"):
         write_query(nest, None, "mysql")
+
+
+def test_an_unnest_that_keeps_empty_lists_keeps_a_row_without_from() -> None:
+    nothing = Literal(None, type_named("INTEGER[]"))
+    one = Project(Values((), ((),)), (Column(fresh("one", INTEGER), number(1)),))
+    assert meant(Unnest(one, nothing, (fresh("item", INTEGER),), None, True)).endswith(
+        "FROM (SELECT 1 AS one) AS part LEFT JOIN UNNEST(CAST(NULL AS INT[])) AS element(item) ON TRUE"
+    )
+    meant(Unnest(Values((), ((),)), nothing, (fresh("item", INTEGER),), fresh("place", BIGINT), True))
 
 
 # --- scalars --------------------------------------------------------------------------------------------------------

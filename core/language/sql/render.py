@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Iterable, Mapping
+from copy import copy
 from dataclasses import dataclass, field
 from typing import cast
 
@@ -14,6 +15,7 @@ from core.algebra.scalars import (
     Attribute,
     Comparison,
     ComparisonOperator,
+    IsNull,
     IsTruth,
     Literal,
     Not,
@@ -29,12 +31,13 @@ from core.language.sql.blocks import (
     Nested,
     Query,
     SetQuery,
+    Stage,
     StepDefinition,
     StepUse,
     SubqueryTerm,
     derived,
 )
-from core.language.sql.gather import leaves, reads_aggregates, reads_terms, unique_names
+from core.language.sql.building import leaves, reads_aggregates, reads_terms, unique_names
 from core.language.sql.prune import slimmed
 from core.language.sql.write_dialect import WriteError
 from core.language.sql.write_scalars import chained, within, write_scalar, written_terms
@@ -435,8 +438,6 @@ def write_term(term: SubqueryTerm, view: View) -> exp.Expression:
     if found is not None:
         return found
     holds = _exists(term.query, term.condition, view)
-    from core.algebra.scalars import IsNull
-
     unknown = _exists(term.query, IsNull(term.condition), view)
     arms = [exp.If(this=holds, true=exp.true()), exp.If(this=unknown, true=exp.Null())]
     return exp.Case(ifs=arms, default=exp.false())
@@ -466,8 +467,6 @@ def _selecting(query: Query, columns: tuple[Attribute, ...]) -> Query:
 
 
 def _copy(block: Query, columns: tuple[Attribute, ...]) -> Block:
-    from copy import copy
-
     assert isinstance(block, Block)
     made = copy(block)
     made.columns = columns
@@ -476,8 +475,6 @@ def _copy(block: Query, columns: tuple[Attribute, ...]) -> Block:
 
 
 def _exists(query: Query, condition: Scalar, view: View) -> exp.Expression:
-    from core.language.sql.blocks import Stage
-
     terms = list(conjuncts(condition))
     if isinstance(query, SetQuery) or query.stage > Stage.HAVING:
         if not terms:

@@ -9,10 +9,11 @@ from sqlglot import exp
 from core.algebra.formulation import Formulation
 from core.algebra.graph import attributes, postorder, scalars
 from core.algebra.operators import Operator
-from core.algebra.scalars import Attribute, Ref, walk
+from core.algebra.scalars import Attribute, Ref, fresh_like, walk
 from core.language.sql.blocks import Block, Query, SetQuery, derived
+from core.language.sql.building import Gathering, unique_names
 from core.language.sql.depth import deep
-from core.language.sql.gather import Gathering, gather, unique_names
+from core.language.sql.gather import gather
 from core.language.sql.render import steps_node, write_query_node
 from core.language.sql.write_dialect import WriteError, fitted
 
@@ -82,8 +83,6 @@ def _outermost(query: Query, columns: Sequence[tuple[Attribute, str]]) -> exp.Qu
 
 def _repeated(query: Query, columns: Sequence[tuple[Attribute, str]]) -> Block:
     """A block in which an attribute that is asked for twice has two columns."""
-    from core.algebra.scalars import fresh_like
-
     block = derived(query) if isinstance(query, SetQuery) or query.distinct else query
     shown: list[Attribute] = []
     for attribute, name in columns:

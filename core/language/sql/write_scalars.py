@@ -197,6 +197,9 @@ def _arithmetic(node: Arithmetic, naming: Naming) -> exp.Expression:
 def write_literal(literal: Literal) -> exp.Expression:
     text, family = literal.text, literal.type.family
     if text is None:
+        if family is Family.NESTED and literal.type != RELATION:
+            # A list without elements is still a list to what opens it.
+            return exp.Cast(this=exp.Null(), to=exp.DataType.build(literal.type.name, dialect="duckdb"))
         return exp.Null()
     if family is Family.BOOLEAN:
         return exp.Boolean(this=text.lower() == "true")
