@@ -15,7 +15,7 @@ from core.catalog.model import Catalog
 from core.drawing.display import ACCENT, INK, SOFT, Circle, DisplayList, Line, Text
 from core.drawing.graph_layout import place
 from core.drawing.plates import ANCHOR, Plate, draw_plate, plate_of
-from core.drawing.routes import Spot, routed
+from core.drawing.routes import Spot, routed, straightened
 from core.drawing.tidy import Node, lay_out
 from core.size import Size
 
@@ -145,6 +145,7 @@ def _draw_graph(
         x, y = placed[owner]
         wide = plate.width + room.get(owner, 0.0)
         spots[owner] = Spot(rows[y], x - wide / 2, plate.width, wide, plate.height, ANCHOR)
+    spots = straightened(spots, edges)
     ways = routed(spots, edges)
     for (above, below), corners in zip(edges, ways.edges, strict=True):
         soft = by_owner[below] in shown.soft

@@ -6,8 +6,9 @@ of their own, unless they end at the same plate.
 
 from __future__ import annotations
 
+from collections import Counter
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from itertools import pairwise
 
 Point = tuple[float, float]
@@ -37,6 +38,30 @@ class Routed:
 
     tops: Sequence[float]
     edges: Sequence[tuple[Point, ...]]
+
+
+def straightened(spots: Mapping[str, Spot], edges: Sequence[tuple[str, str]], gap: float = 26.0) -> dict[str, Spot]:
+    """The spots with every plate that one operator reads, and nothing else beside it, under that operator's head.
+
+    A plate moves within its row as far as its neighbours let it.
+    """
+    found = dict(spots)
+    inputs, readers = Counter(above for above, _ in edges), Counter(below for _, below in edges)
+    rows: dict[int, list[str]] = {}
+    for owner, spot in sorted(spots.items(), key=lambda pair: pair[1].left):
+        rows.setdefault(spot.row, []).append(owner)
+    for above, below in sorted(edges, key=lambda edge: spots[edge[1]].row):
+        spot = found[below]
+        if inputs[above] > 1 or readers[below] > 1 or found[above].row + 1 != spot.row:
+            continue
+        row = rows[spot.row]
+        place = row.index(below)
+        before, after = row[:place][-1:], row[place + 1 : place + 2]
+        left = found[above].head - spot.anchor
+        left = min([left, *(found[o].left - gap - spot.room for o in after)])
+        left = max([left, *(found[o].left + found[o].room + gap for o in before)])
+        found[below] = replace(spot, left=left)
+    return found
 
 
 def routed(spots: Mapping[str, Spot], edges: Sequence[tuple[str, str]]) -> Routed:
