@@ -7,7 +7,7 @@ from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field
 
 from core.algebra.formulation import Formulation
-from core.algebra.graph import dependent, inputs, parents, postorder, scalars
+from core.algebra.graph import dependent, inputs, parents, scalars
 from core.algebra.notation import Naming
 from core.algebra.operators import Join, Operator, Relation
 from core.algebra.scalars import Attribute, refs
@@ -269,9 +269,3 @@ def _balloons(out: DisplayList, balloons: Sequence[Balloon], owners: Mapping[Ope
         out.add(Circle(x, y, 10, ACCENT, "paper", 1.3, f"callout{balloon.number}"))
         out.add(Text(x, y + 4, str(balloon.number), "sans-bold", 11, ACCENT, "middle", f"callout{balloon.number}"))
         out.boxes[f"callout{balloon.number}"] = (x - 10, y - 10, x + 10, y + 10)
-
-
-def heaviest(formulation: Formulation, sizes: Mapping[Operator, Size]) -> Operator | None:
-    """The operator with the most rows out, base relations left aside."""
-    inner = [op for op in postorder(*formulation.roots()) if not isinstance(op, Relation)]
-    return max(inner, key=lambda op: sizes[op].best, default=None)

@@ -3,11 +3,13 @@
 from __future__ import annotations
 
 import random
-from itertools import combinations
+from collections import Counter
+from itertools import combinations, pairwise
 
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
+from core.algebra.graph import inputs
 from core.catalog.ddl import catalog_from_ddl
 from core.catalog.model import Evidence
 from core.drawing.display import Box, Circle, DisplayList, Line, Shape, Text, box_of
@@ -152,3 +154,25 @@ def test_nothing_meets_on_generated_sheets(seed: int) -> None:
     printed = draw_page(columns, page)
     check(printed)
     inside(printed)
+
+
+@settings(deadline=None, max_examples=30)
+@given(st.integers(0, 1 << 30))
+def test_edges_lead_from_a_foot_to_a_head(seed: int) -> None:
+    """Every edge of the algebra is drawn once: from below its reader to above its input, in straight lines."""
+    formulation = read_sql(shared_query(random.Random(seed)), catalog_from_ddl(SCHEMA))
+    rng = random.Random(seed)
+    sizes = {op: random_size(rng) for op in formulation.operators()}
+    plan = draw_plan(formulation, sizes, catalog_from_ddl(SCHEMA), "A", 9)
+    found = []
+    for item in plan.display.items:
+        if isinstance(item, Line) and not item.owner:
+            assert all(abs(x1 - x2) < 1e-6 or abs(y1 - y2) < 1e-6 for (x1, y1), (x2, y2) in pairwise(item.points))
+            (x1, y1), (x2, y2) = item.points[0], item.points[-1]
+            boxes = plan.display.boxes.items()
+            above = [o for o, b in boxes if b[0] < x1 < b[2] + 11 and abs(b[3] + 4 - y1) < 1e-6]
+            below = [o for o, b in boxes if b[0] < x2 < b[2] and abs(b[1] - 4 - y2) < 1e-6]
+            assert len(above) == len(below) == 1
+            found.append((plan.operators[above[0]], plan.operators[below[0]]))
+    wanted = [(op, below) for op in formulation.operators() for below in inputs(op)]
+    assert Counter(found) == Counter(wanted)
