@@ -72,7 +72,12 @@ class Text:
     def box(self) -> Box:
         """Where ink can be: the width, from above the capitals to below the descenders."""
         left = self.left
-        return (left, self.y - 0.78 * self.size, left + width(self.text, self.face, self.size), self.y + 0.22 * self.size)
+        return (
+            left,
+            self.y - 0.78 * self.size,
+            left + width(self.text, self.face, self.size),
+            self.y + 0.22 * self.size,
+        )
 
 
 Item = Line | Shape | Circle | Text

@@ -76,7 +76,9 @@ def _dimension(out: DisplayList, dimension: Dimension) -> None:
     best = (0.0, 0.0, 0.0)
     for y in _heights(a, b):
         # Where something stands in the way, the line keeps to the widest gap.
-        blocked = sorted((left - 14, right + 14) for left, top, right, bottom in obstacles if top < y + 9 and bottom > y - 20)
+        blocked = sorted(
+            (left - 14, right + 14) for left, top, right, bottom in obstacles if top < y + 9 and bottom > y - 20
+        )
         start = a[2] + 34
         for left, right in [*blocked, (b[0] - 14, b[0])]:
             if left - start > best[1] - best[0] + 1:
@@ -167,7 +169,9 @@ def _frame(out: DisplayList, wide: float, high: float, inner: Box) -> None:
         middle = y + (inner[3] - inner[1]) / down / 2
         if i:
             out.add(Line(((outer[0], y), (inner[0], y)), SOFT, 0.8))
-        out.add(Text((outer[0] + inner[0]) / 2, middle + 3, "ABCDEFGHJKLMNPQRSTUVWXYZ"[i % 24], "sans", 9, SOFT, "middle"))
+        out.add(
+            Text((outer[0] + inner[0]) / 2, middle + 3, "ABCDEFGHJKLMNPQRSTUVWXYZ"[i % 24], "sans", 9, SOFT, "middle")
+        )
 
 
 class _Tables:
@@ -262,5 +266,3 @@ class _Tables:
                 y += 17
             y += 6
         return out
-
-

@@ -32,7 +32,15 @@ DARK: Palette = {
     "text": "#b9d98a",
     "number": "#dcb3ea",
 }
-PRINT: Palette = {**LIGHT, INK: "#000000", SOFT: "#4a4a4a", FAINT: "#bdbdbd", PAPER: "#ffffff", ACCENT: "#b3410e", WASH: "#f1f1f1"}
+PRINT: Palette = {
+    **LIGHT,
+    INK: "#000000",
+    SOFT: "#4a4a4a",
+    FAINT: "#bdbdbd",
+    PAPER: "#ffffff",
+    ACCENT: "#b3410e",
+    WASH: "#f1f1f1",
+}
 PALETTES = {"light": LIGHT, "dark": DARK, "print": PRINT}
 
 

@@ -86,7 +86,11 @@ def draw_plan(
         operator, above = pending.pop()
         again = operator in owners
         owner = f"{prefix}{len(plates) + 1}"
-        plates[owner] = _reference(operator, owner, formulation) if again else _plate(operator, owner, formulation, sizes, catalog, naming, shown)
+        plates[owner] = (
+            _reference(operator, owner, formulation)
+            if again
+            else _plate(operator, owner, formulation, sizes, catalog, naming, shown)
+        )
         operators[owner] = operator
         owners.setdefault(operator, owner)
         after = max(10.0, plates[owner].width - ANCHOR) + (0.0 if again else room.get(operator, 0.0))

@@ -109,7 +109,9 @@ def draw_plate(plate: Plate, left: float, top: float, decades: int) -> DisplayLi
     line = SOFT if plate.soft else INK
     edge = ACCENT if plate.accent or plate.selected else line
     if plate.accent or plate.selected:
-        out.add(Shape(((left, top), (left + wide, top), (left + wide, top + height), (left, top + height)), WASH, owner=own))
+        out.add(
+            Shape(((left, top), (left + wide, top), (left + wide, top + height), (left, top + height)), WASH, owner=own)
+        )
     bracket = ((left + 10, top), (left, top), (left, top + height), (left + 10, top + height))
     out.add(Line(bracket, edge, 2.2 if plate.accent or plate.selected else 1.3, owner=own))
     if plate.sign:
@@ -121,7 +123,9 @@ def draw_plate(plate: Plate, left: float, top: float, decades: int) -> DisplayLi
         _relation(out, plate, left, top, line)
         note_left = left + 10
     if plate.note:
-        out.add(Text(note_left, top + 33, cut(plate.note, "mono", 10, WIDEST), "mono", 10, SOFT, owner=own, detail=True))
+        out.add(
+            Text(note_left, top + 33, cut(plate.note, "mono", 10, WIDEST), "mono", 10, SOFT, owner=own, detail=True)
+        )
     if plate.size is not None:
         _gauge(out, plate.size, left + 12, top + height - 27, decades, line, own)
     out.boxes[own] = (left, top, left + wide, top + height)
@@ -134,7 +138,17 @@ def _sign(out: DisplayList, plate: Plate, left: float, top: float, role: str) ->
         return
     out.add(Text(left + 10, top + 21, plate.sign, "serif", _SIGN, role, owner=plate.owner))
     if plate.mark:
-        out.add(Text(left + 11 + width(plate.sign, "serif", _SIGN), top + 25, plate.mark, "sans-bold", 9, role, owner=plate.owner))
+        out.add(
+            Text(
+                left + 11 + width(plate.sign, "serif", _SIGN),
+                top + 25,
+                plate.mark,
+                "sans-bold",
+                9,
+                role,
+                owner=plate.owner,
+            )
+        )
 
 
 def _relation(out: DisplayList, plate: Plate, left: float, top: float, role: str) -> None:
@@ -206,5 +220,3 @@ def _gauge(out: DisplayList, size: Size, left: float, y: float, decades: int, ro
     number, word = rows_text(size.best), evidence_word(size)
     out.add(Text(left + GAUGE + 9, y + 2, number, "sans-bold", 12, role, owner=own))
     out.add(Text(left + GAUGE + 9, y + 14, word, "sans", 9.5, SOFT, owner=own, detail=True))
-
-

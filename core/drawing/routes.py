@@ -114,9 +114,7 @@ def _starts(spots: Mapping[str, Spot], edges: Sequence[tuple[str, str]]) -> list
     return starts
 
 
-def _lanes(
-    spots: Mapping[str, Spot], edges: Sequence[tuple[str, str]], starts: Sequence[float]
-) -> list[list[float]]:
+def _lanes(spots: Mapping[str, Spot], edges: Sequence[tuple[str, str]], starts: Sequence[float]) -> list[list[float]]:
     """For each edge its place at its own row, in each row that it passes, and at its head."""
     blocked: dict[int, list[tuple[float, float]]] = {}
     for spot in spots.values():

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import random
 import xml.etree.ElementTree as ET
-from itertools import combinations
+from itertools import combinations, pairwise
 from pathlib import Path
 
 import pytest
@@ -58,7 +58,9 @@ def test_edges_never_cross_plates(qtbot: QtBot) -> None:
             if isinstance(item, Line) and not item.owner:
                 for (x1, y1), (x2, y2) in zip(item.points, item.points[1:], strict=False):
                     for left, top, right, bottom in plates:
-                        inside = max(min(x1, x2), left) < min(max(x1, x2), right) and max(min(y1, y2), top) < min(max(y1, y2), bottom)
+                        inside = max(min(x1, x2), left) < min(max(x1, x2), right) and max(min(y1, y2), top) < min(
+                            max(y1, y2), bottom
+                        )
                         assert not inside or (x1 == x2 and y1 == y2)
 
 
@@ -81,7 +83,16 @@ def test_texts_are_cut_and_wrapped_to_measure() -> None:
     text = "delivered_at > promised_at and parcel_id = notices.parcel_id"
     for most in range(20, 400, 17):
         assert width(cut(text, "mono", 11.5, most), "mono", 11.5) <= max(most, width("…", "mono", 11.5))
-        assert all(width(line, "sans", 12, ) <= most or " " not in line for line in wrapped(text, "sans", 12, most))
+        assert all(
+            width(
+                line,
+                "sans",
+                12,
+            )
+            <= most
+            or " " not in line
+            for line in wrapped(text, "sans", 12, most)
+        )
 
 
 @pytest.mark.parametrize("name", PALETTES)
@@ -139,7 +150,7 @@ def test_trees_never_overlap() -> None:
             by_level.setdefault(node.y, []).append(node)
         for level in by_level.values():
             level.sort(key=lambda n: n.x)
-            for left, right in zip(level, level[1:], strict=False):
+            for left, right in pairwise(level):
                 assert left.x + left.after <= right.x - right.before + 1e-6
         for node in nodes:
             xs = [child.x for child in node.children]
@@ -149,7 +160,7 @@ def test_trees_never_overlap() -> None:
 
 def test_deep_trees_are_laid_out() -> None:
     chain = [Node(10, 10, 20) for _ in range(10_000)]
-    for above, below in zip(chain, chain[1:], strict=False):
+    for above, below in pairwise(chain):
         above.children.append(below)
     lay_out(chain[0])
     assert len({round(node.x, 6) for node in chain}) == 1
@@ -177,7 +188,19 @@ def test_exports_carry_the_sheet(qtbot: QtBot, tmp_path: Path, ending: str) -> N
 
 @pytest.mark.parametrize(
     ("value", "text"),
-    [(0, "0"), (0.3, "0.3"), (1, "1"), (412, "412"), (4861.4, "4861"), (70_200_000, "70.2M"), (741e6, "741M"), (1.2e9, "1.2G"), (999_600, "1M"), (52e6, "52M"), (6.912e11, "691G")],
+    [
+        (0, "0"),
+        (0.3, "0.3"),
+        (1, "1"),
+        (412, "412"),
+        (4861.4, "4861"),
+        (70_200_000, "70.2M"),
+        (741e6, "741M"),
+        (1.2e9, "1.2G"),
+        (999_600, "1M"),
+        (52e6, "52M"),
+        (6.912e11, "691G"),
+    ],
 )
 def test_rows(value: float, text: str) -> None:
     assert rows_text(value) == text
@@ -191,7 +214,9 @@ def test_ratios_and_bytes() -> None:
     assert bytes_text(912) == "912 B"
 
 
-SHARED = "with x as (select a, b from t where h > 0) select p.a, q.b from x p join x q on p.a = q.b join x z on z.a = q.a"
+SHARED = (
+    "with x as (select a, b from t where h > 0) select p.a, q.b from x p join x q on p.a = q.b join x z on z.a = q.a"
+)
 
 
 def test_shared_parts_are_drawn_once_as_a_graph(qtbot: QtBot) -> None:
@@ -212,7 +237,9 @@ def test_shared_parts_are_drawn_once_as_a_graph(qtbot: QtBot) -> None:
     assert "pygraphviz" not in sys.modules
 
 
-def test_without_graphviz_a_shared_part_is_named_at_its_second_place(qtbot: QtBot, monkeypatch: pytest.MonkeyPatch) -> None:
+def test_without_graphviz_a_shared_part_is_named_at_its_second_place(
+    qtbot: QtBot, monkeypatch: pytest.MonkeyPatch
+) -> None:
     from tests.generate.queries import SCHEMA
 
     monkeypatch.setattr("core.drawing.plan.place", lambda *_: None)

@@ -20,7 +20,17 @@ from core.language.sql.read import read_sql
 from core.size import Size
 from tests.generate.queries import SCHEMA, random_query
 
-WORDS = ["parcel", "delivered_at", "a", "σ", "≥", "duplicates", "of_a_very_long_name_that_no_line_of_the_sheet_can_hold" * 3, "→", "12.5M"]
+WORDS = [
+    "parcel",
+    "delivered_at",
+    "a",
+    "σ",
+    "≥",
+    "duplicates",
+    "of_a_very_long_name_that_no_line_of_the_sheet_can_hold" * 3,
+    "→",
+    "12.5M",
+]
 
 
 def sentence(rng: random.Random, most: int) -> str:
@@ -78,7 +88,10 @@ def inner(box: Box, by: float) -> Box:
 def meets(line: Line, box: Box) -> bool:
     """Whether an orthogonal line runs through a box."""
     for (x1, y1), (x2, y2) in zip(line.points, line.points[1:], strict=False):
-        if max(min(x1, x2), box[0]) < min(max(x1, x2), box[2]) + 1e-9 and max(min(y1, y2), box[1]) < min(max(y1, y2), box[3]) + 1e-9:
+        if (
+            max(min(x1, x2), box[0]) < min(max(x1, x2), box[2]) + 1e-9
+            and max(min(y1, y2), box[1]) < min(max(y1, y2), box[3]) + 1e-9
+        ):
             return True
     return False
 
@@ -145,7 +158,9 @@ def test_nothing_meets_on_generated_sheets(seed: int) -> None:
     page = Page(
         title=sentence(rng, 8),
         callouts=[(i, sentence(rng, 30)) for i in range(1, number)],
-        revisions=[(f"B{i + 1}", sentence(rng, 14), rng.choice(["÷ 14.3", "=", "× 1.05k"])) for i in range(rng.randint(0, 7))],
+        revisions=[
+            (f"B{i + 1}", sentence(rng, 14), rng.choice(["÷ 14.3", "=", "× 1.05k"])) for i in range(rng.randint(0, 7))
+        ],
         verdict=rng.choice(["", sentence(rng, 24)]),
         figures=[("rows through all operators", sentence(rng, 2))],
         facts=[("statistics", sentence(rng, 9)), ("site", sentence(rng, 3))],

@@ -69,7 +69,10 @@ ERRORS = {
         "line 1, column 8: b is neither grouped nor inside an aggregate\n  select b, count(*) from t group by a\n         ^\n"
         "  help: group by b too, or aggregate it",
     ),
-    "no query": ("delete from t", "line 1, column 1: this is a delete statement, not a query\n  delete from t\n  ^^^^^^^^^^^^^"),
+    "no query": (
+        "delete from t",
+        "line 1, column 1: this is a delete statement, not a query\n  delete from t\n  ^^^^^^^^^^^^^",
+    ),
 }
 
 
@@ -130,7 +133,12 @@ def test_spans_point_into_the_text() -> None:
         ("list", f"select a from r where a in ({', '.join(map(str, range(10_000)))})"),
         ("parentheses", "select " + "(" * 200 + "a" + ")" * 200 + " from r"),
         ("sum", "select " + " + ".join(["a"] * 2000) + " as s from r"),
-        ("steps", "with " + ", ".join(f"x{i} as (select a from {'r' if i == 0 else f'x{i - 1}'})" for i in range(1000)) + " select a from x999"),
+        (
+            "steps",
+            "with "
+            + ", ".join(f"x{i} as (select a from {'r' if i == 0 else f'x{i - 1}'})" for i in range(1000))
+            + " select a from x999",
+        ),
         ("unions", " union all ".join(["select a from r"] * 1000)),
         ("joins", "select q0.a from r q0 " + " ".join(f"join r q{i} on q{i}.a = q{i - 1}.a" for i in range(1, 300))),
     ],

@@ -241,7 +241,10 @@ def _compare_rows(
         return conjunction(compare(operator, a, b) for a, b in pairs)
     if operator in (unequal, ComparisonOperator.DISTINCT):
         return disjunction(compare(operator, a, b) for a, b in pairs)
-    strict = {ComparisonOperator.AT_MOST: ComparisonOperator.LESS, ComparisonOperator.AT_LEAST: ComparisonOperator.GREATER}
+    strict = {
+        ComparisonOperator.AT_MOST: ComparisonOperator.LESS,
+        ComparisonOperator.AT_LEAST: ComparisonOperator.GREATER,
+    }
     arms = []
     for i, (a, b) in enumerate(pairs):
         last = operator if i == len(pairs) - 1 else strict.get(operator, operator)
@@ -456,4 +459,3 @@ _READERS: dict[type[exp.Expression], Callable[[exp.Expression, Block], Scalar]] 
     **dict.fromkeys(_COMPARISONS, _comparison),
     **dict.fromkeys(_ARITHMETIC, _arithmetic),
 }
-

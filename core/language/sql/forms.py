@@ -49,5 +49,6 @@ def bound_arguments(form: str) -> frozenset[int]:
     return frozenset(
         int(found.name[len(_HOLE) :])
         for found in _template(form).find_all(exp.Placeholder)
-        if found.name.startswith(_HOLE) and not (isinstance(found.parent, exp.Func) and not isinstance(found.parent, exp.Binary))
+        if found.name.startswith(_HOLE)
+        and not (isinstance(found.parent, exp.Func) and not isinstance(found.parent, exp.Binary))
     )

@@ -266,9 +266,7 @@ def _inferred_relation(node: exp.Expression, name: str, label: str, columns: lis
 
 
 def _table_function(node: exp.Table, block: Block, left: Item | None) -> Item:
-    around = Block(
-        block.reading, block.environment, Scope() if left is None else left.scope, NOTHING, block.outer
-    )
+    around = Block(block.reading, block.environment, Scope() if left is None else left.scope, NOTHING, block.outer)
     call = expressions.read_scalar(node.this, around)
     if not isinstance(call, Call):
         raise block.reading.refuse("this is no table function", node)
@@ -409,9 +407,7 @@ def filter_plan(condition: exp.Expression, block: Block) -> None:
         block.reading.mark(block.plan, term)
 
 
-def _join_using(
-    join: exp.Expression, kind: JoinKind, left: Item, right: Item, using: list[str], block: Block
-) -> Item:
+def _join_using(join: exp.Expression, kind: JoinKind, left: Item, right: Item, using: list[str], block: Block) -> Item:
     """USING and NATURAL: equality of the named columns, which are shown once (ISO/IEC 9075-2)."""
     terms: list[Scalar] = []
     merged: dict[str, Scalar] = {}
@@ -427,9 +423,7 @@ def _join_using(
     block.reading.mark(plan, join.this, *(join.args.get("using") or []))
     if kind in (JoinKind.SEMI, JoinKind.ANTI):
         return Item(plan, left.scope)
-    shown = [
-        Shown(s.name, merged[s.name.lower()], "") if s.name.lower() in merged else s for s in left.scope.shown
-    ]
+    shown = [Shown(s.name, merged[s.name.lower()], "") if s.name.lower() in merged else s for s in left.scope.shown]
     shown.extend(s for s in right.scope.shown if s.name.lower() not in merged)
     return Item(plan, Scope(left.scope.sources + right.scope.sources, shown))
 

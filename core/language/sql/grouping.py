@@ -43,7 +43,9 @@ def is_aggregate(node: exp.Expression) -> bool:
     return isinstance(node, exp.Anonymous) and node.name.lower() in AGGREGATES
 
 
-def _inside(roots: Iterable[exp.Expression], stop: type[exp.Expression] | tuple[type[exp.Expression], ...]) -> Iterator[exp.Expression]:
+def _inside(
+    roots: Iterable[exp.Expression], stop: type[exp.Expression] | tuple[type[exp.Expression], ...]
+) -> Iterator[exp.Expression]:
     """The nodes in and below the roots, not entering queries; nodes of type `stop` are given and not entered."""
     pending = list(roots)[::-1]
     while pending:
@@ -160,7 +162,11 @@ def _assembled(
         return Aggregate("count", (), BIGINT, distinct, condition, order)
     form, arguments = expressions.cut(bare, block)
     # The quantile and its ordering stand inside WITHIN GROUP when the call is printed.
-    text = form_of(exp.WithinGroup(this=form, expression=exp.Order(expressions=[hole(len(arguments))]))) if within else form_of(form)
+    text = (
+        form_of(exp.WithinGroup(this=form, expression=exp.Order(expressions=[hole(len(arguments))])))
+        if within
+        else form_of(form)
+    )
     if within:
         return Aggregate(name, arguments, UNKNOWN, distinct, condition, order, text)
     if name in _PLAIN and len(arguments) == 1 and not isinstance(bare, exp.Anonymous):
@@ -371,7 +377,11 @@ def grouped_value(block: Block, value: Scalar, node: exp.Expression) -> Scalar:
     if value in block.keys:
         return Ref(block.keys[value])
     read = refs(value)
-    if not read or read <= set(attributes(block.plan)) or (block.before is not None and read.isdisjoint(attributes(block.before.plan))):
+    if (
+        not read
+        or read <= set(attributes(block.plan))
+        or (block.before is not None and read.isdisjoint(attributes(block.before.plan)))
+    ):
         return value
     if isinstance(value, Ref) and _determined(block, value.attribute):
         _add_key(block, value.attribute)
@@ -528,4 +538,3 @@ def column_name(node: exp.Expression) -> str:
         columns = [part for part in node.iter_expressions() if isinstance(part, exp.Column)]
         return f"{name}_{columns[0].name}" if len(columns) == 1 else name
     return "value"
-

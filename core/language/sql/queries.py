@@ -169,7 +169,9 @@ def _set_operation(node: exp.SetOperation, environment: Environment, outer: Bloc
     """A chain of set operations, left to right; a run of unions of one kind is one operator."""
     chain: list[exp.SetOperation] = [node]
     left: exp.Expression = node.this
-    while isinstance(left, exp.SetOperation) and not any(left.args.get(k) for k in ("order", "limit", "offset", "with_")):
+    while isinstance(left, exp.SetOperation) and not any(
+        left.args.get(k) for k in ("order", "limit", "offset", "with_")
+    ):
         _only(left, _SET_PARTS, reading)
         chain.append(left)
         left = left.this
@@ -326,9 +328,7 @@ def _select(node: exp.Select, environment: Environment, outer: Block | None, rea
         raise reading.refuse("nothing is selected", node, help="name the columns after SELECT")
     block = Block(reading, environment, Scope(), NOTHING, outer)
     read_from(node, block)
-    block.select_aliases = {
-        item.alias.lower(): item.this for item in node.expressions if isinstance(item, exp.Alias)
-    }
+    block.select_aliases = {item.alias.lower(): item.this for item in node.expressions if isinstance(item, exp.Alias)}
     nodes = _expand_aliases(node, block)
     where = node.args.get("where")
     if where is not None:
@@ -587,4 +587,3 @@ def _distinct_on(
         reading.mark(plan, node.args.get("order"))
     plan = _limited(node, plan, block.environment, block.outer, reading)
     return Result(plan, tuple((c.attribute, item.name) for c, item in zip(columns, items, strict=True)))
-

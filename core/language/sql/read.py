@@ -73,7 +73,13 @@ def _formulation(result: Result, reading: Reading) -> Formulation:
     output = Output("answer", result.plan, result.columns)
     try:
         made = Formulation(
-            (output,), reading.names, reading.aliases, reading.spans, reading.text, reading.dialect, notes=_notes(reading)
+            (output,),
+            reading.names,
+            reading.aliases,
+            reading.spans,
+            reading.text,
+            reading.dialect,
+            notes=_notes(reading),
         )
     except IllegalFormulation as fault:
         raise ReadError([Diagnostic("not-represented", str(fault))], reading.text) from fault

@@ -122,7 +122,9 @@ class Block:
                 if len(sources) > 1:
                     owners = " or ".join(source.alias for source in sources)
                     self.reading.note(
-                        "inferred-name", f"{name} may be a column of {owners}; it is read as one of {sources[0].alias}", node
+                        "inferred-name",
+                        f"{name} may be a column of {owners}; it is read as one of {sources[0].alias}",
+                        node,
                     )
                 found = sources[0].find(name)
                 return None if found is None else block._grouped(found, node)
@@ -207,5 +209,3 @@ def hull(*nodes: exp.Expression | None) -> Span | None:
             end = max(end, meta["end"] + 1)
         pending.extend(node.iter_expressions())
     return None if start < 0 else Span(start, end)
-
-

@@ -74,9 +74,7 @@ def filter_by(term: exp.Expression, block: Block) -> bool:
     if isinstance(inner, exp.Binary) and positive and type(inner) in expressions._COMPARISONS:
         quantifier = inner.args["expression"]
         if isinstance(quantifier, (exp.Any, exp.All)) and _query_of(quantifier) is not None:
-            comparison, result = _quantified(
-                expressions._COMPARISONS[type(inner)], inner.this, quantifier, block
-            )
+            comparison, result = _quantified(expressions._COMPARISONS[type(inner)], inner.this, quantifier, block)
             if isinstance(quantifier, exp.Any):
                 attach(block, JoinKind.SEMI, result.plan, comparison, term)
             else:
@@ -93,7 +91,8 @@ def _membership(node: exp.In, block: Block) -> tuple[Scalar, Result]:
     result = _read(query, block)
     if len(result.columns) != len(left):
         raise block.reading.refuse(
-            f"{len(left)} value{'s' if len(left) > 1 else ''} cannot be in a query of {len(result.columns)} columns", node
+            f"{len(left)} value{'s' if len(left) > 1 else ''} cannot be in a query of {len(result.columns)} columns",
+            node,
         )
     equal = ComparisonOperator.EQUAL
     pairs = zip(left, result.columns, strict=True)
