@@ -115,6 +115,10 @@ class Node:
     def __hash__(self) -> int:
         return self._hash
 
+    def __reduce__(self) -> tuple[object, ...]:
+        """Pickled as a call of its class: another process has other hashes of texts."""
+        return type(self), tuple(getattr(self, name) for name in _field_names(type(self)))
+
     def __eq__(self, other: object) -> bool:
         if self is other:
             return True
@@ -419,6 +423,12 @@ def transform(root: N, change: Callable[[Node], Node]) -> N:
     Equal inner nodes are changed once. The same object comes back where nothing changed.
     """
     done: dict[Node, Node] = {}
+    unchanged: set[Node] = set()
+
+    def became(node: Node) -> Node:
+        # An equal node may stand for this one in `done`: what did not change must stay the very object.
+        return node if node in unchanged else done[node]
+
     pending: list[tuple[Node, bool]] = [(root, False)]
     while pending:
         node, ready = pending.pop()
@@ -426,11 +436,13 @@ def transform(root: N, change: Callable[[Node], Node]) -> N:
             continue
         inner = parts(node)
         if ready or not inner:
-            done[node] = change(with_parts(node, tuple(done[part] for part in inner)))
+            done[node] = change(with_parts(node, tuple(became(part) for part in inner)))
+            if done[node] is node:
+                unchanged.add(node)
         else:
             pending.append((node, True))
             pending.extend((part, False) for part in inner)
-    return done[root]  # type: ignore[return-value]
+    return became(root)  # type: ignore[return-value]
 
 
 def substitute(root: N, mapping: Mapping[Attribute, Scalar]) -> N:
@@ -442,7 +454,8 @@ def substitute(root: N, mapping: Mapping[Attribute, Scalar]) -> N:
 
 def renamed(root: N, mapping: Mapping[Attribute, Attribute]) -> N:
     """The scalar reading other attributes in place of those in the mapping."""
-    return substitute(root, {old: Ref(new) for old, new in mapping.items()})
+    # The mapping may hold every attribute of a large graph; a scalar reads few.
+    return substitute(root, {old: Ref(mapping[old]) for old in refs(root) if old in mapping})
 
 
 def conjuncts(condition: Scalar) -> tuple[Scalar, ...]:
