@@ -14,7 +14,7 @@ from core.size import Size
 from tests.generate.queries import Data
 
 _EXACT = frozenset({"distinct", "nulls", "low", "high", "largest_group", "heavy"})
-_NUMBER = re.compile(r"(?<![\d.])(?<!\^ )(?!1(?![\d.e]))\d+(?:\.\d+)?(?:e[+-]?\d+)?")  # no bare 1, no exponent
+_NUMBER = re.compile(r"(\^ )?(\d+(?:\.\d+)?(?:e[+-]?\d+)?)")
 _ALLOWED = re.compile(r"(?:\d+(?:\.\d+)?(?:e[+-]?\d+)?|min|max|[-+×÷^(),\s])*")
 
 
@@ -28,9 +28,15 @@ def recomputed(formula: str) -> float:
 def leeway(formula: str) -> float:
     """How far a result may be off because the figures in the formula are written with six digits."""
     exact, rng, most = recomputed(formula), random.Random(1), 0.0
+
+    def turned(found: re.Match[str]) -> str:
+        power, figure = found.groups()
+        if power or figure == "1":
+            return found[0]
+        return repr(float(figure) * (1 + rng.choice([-5e-6, 5e-6])))
+
     for _ in range(12):
-        turned = _NUMBER.sub(lambda m: repr(float(m[0]) * (1 + rng.choice([-5e-6, 5e-6]))), formula)
-        most = max(most, abs(recomputed(turned) - exact))
+        most = max(most, abs(recomputed(_NUMBER.sub(turned, formula)) - exact))
     return 4 * most
 
 
