@@ -112,3 +112,21 @@ def test_values_outside_the_heavy_hitters() -> None:
     found = base_distribution(AttributeFacts("stringu1", TEXT, False, statistics), TEXT, 10_000)
     assert found.share_of("xxx") == pytest.approx(0.0014559, rel=1e-3)
     assert round(10_000 * found.share_of("xxx")) == 15
+
+
+def test_heavy_hitters_and_histogram_together() -> None:
+    """PostgreSQL manual: 0.01833333 + 0.298387 × 0.96966667 = 0.307669, 3,077 of 10,000 rows (figures from memory).
+
+    The manual's bound is a text; here it is a number with the same part of the histogram below it.
+    """
+    found = Distribution(
+        676,
+        heavy=((-1, 0.01833333), (2_000_000, 1 - 0.01833333 - 0.96966667)),
+        bounds=(0.0, 1_000_000.0),
+        low=-1,
+        high=2_000_000,
+        evidence=Evidence.PROFILED,
+    )
+    share = found.share_below(298_387, inclusive=False)
+    assert share == pytest.approx(0.307669, rel=1e-5)
+    assert round(10_000 * (share or 0)) == 3077
