@@ -137,7 +137,7 @@ def _written(cluster: Cluster, order: Sequence[int], extras: list[Node], outer: 
     label, classes = _labels(cluster, names, outer)
     others = [c for c in cluster.conditions if not _equates(c)]
     conditions = sorted({*classes, *bounded_texts(others, label)})
-    filters = sorted(_filter_text(f, label) for f in cluster.filters)
+    filters = sorted({_filter_text(f, label) for f in cluster.filters})
     keys = [cluster.leaves[i].key for i in order]
     text = f"block({' '.join(keys)} | {' & '.join(conditions)} | {' & '.join(filters)})"
     return text, [term_text(extra, label) for extra in extras]

@@ -4,13 +4,14 @@ from __future__ import annotations
 
 import threading
 import time
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 from core.algebra.formulation import Formulation
 from core.algebra.operators import Sort
 from core.catalog.model import Catalog
 from core.compare.canonical import NoForm, canonical
 from core.compare.settled import unsettled
+from core.compare.simplify import simplified
 from core.derive.facts import Facts
 from core.rewrite import Offer, attempts, rule_named
 from core.rewrite.context import Context
@@ -75,11 +76,15 @@ def normal_form(
     facts = Facts(catalog)
     ends = time.monotonic() + seconds
     steps: list[ProofStep] = []
-    current = formulation
+    current = _simplified(formulation, facts, steps, side)
     while len(steps) < _MOST_STEPS and time.monotonic() < ends and not (cancel is not None and cancel.is_set()):
         offer = _next(current, facts)
         if offer is None:
-            break
+            simpler = _simplified(current, facts, steps, side)
+            if simpler is current:
+                break
+            current = simpler
+            continue
         steps.append(ProofStep(side, offer.rule.title, offer.rule.law, offer.what))
         current = offer.after
     output = current.outputs[-1]
@@ -96,6 +101,18 @@ def normal_form(
     except RecursionError:
         return Normal(current, None, tuple(steps), "it is nested too deeply")
     return Normal(current, text, tuple(steps))
+
+
+def _simplified(formulation: Formulation, facts: Facts, steps: list[ProofStep], side: str) -> Formulation:
+    """The formulation with simpler expressions; a step is added where that changed something."""
+    output = formulation.outputs[-1]
+    root = simplified(output.operator, facts)
+    if root is output.operator:
+        return formulation
+    what = "expressions simplified: what can only be true, what cannot be NULL, and common factors"
+    steps.append(ProofStep(side, "simplify expressions", "laws of three-valued logic", what))
+    # The names of steps point into the old graph; a proof reads the answer alone.
+    return replace(formulation, outputs=(replace(output, operator=root),), names={}, aliases={}, spans={})
 
 
 def _next(current: Formulation, facts: Facts) -> Offer | None:

@@ -51,6 +51,13 @@ _PLAIN_NAMES = frozenset({"coalesce", "lower", "upper", "abs", "length"})
 """Functions whose name and arguments say everything, so that a call made by a rule is the one that was read."""
 
 
+_DEFAULT_FRAMES = (
+    Frame("range", (None, "preceding"), (None, "current")),
+    Frame("RANGE", (None, "preceding"), (None, "current")),
+)
+"""What the standard takes where no frame is written."""
+
+
 def term_text(node: Node, label: Label) -> str:
     """The canonical text of a scalar, with attributes called by their labels."""
     match node:
@@ -92,7 +99,7 @@ def term_text(node: Node, label: Label) -> str:
         case WindowCall(function=function, partition=partition, order=order, frame=frame):
             by = sorted({term_text(p, label) for p in partition})
             keys = [term_text(k, label) for k in order]
-            bounds = "" if frame is None else term_text(frame, label)
+            bounds = "" if frame is None or frame in _DEFAULT_FRAMES else term_text(frame, label)
             return f"window({term_text(function, label)} by {by} order {keys} {bounds})"
         case Frame(unit=unit, start=start, end=end, exclude=exclude):
             ends = [f"{'' if o is None else term_text(o, label)} {d}" for o, d in (start, end)]
