@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import threading
 import time
+from collections.abc import Sequence
 from dataclasses import dataclass, replace
 
 from core.algebra.formulation import Formulation
@@ -15,6 +16,7 @@ from core.compare.simplify import simplified
 from core.derive.facts import Facts
 from core.rewrite import Offer, attempts, rule_named
 from core.rewrite.context import Context
+from core.rewrite.rule import Rule
 
 # In order of use. Each one takes something away or moves a selection down, so the chain ends.
 NORMALISING = tuple(
@@ -46,6 +48,16 @@ NORMALISING = tuple(
         "merge-projections",
     )
 )
+"""Joins keep the conditions above them: the canonical text gathers both."""
+
+PUSHING = (
+    *NORMALISING[:6],
+    rule_named("push-selection-below-projection"),
+    rule_named("push-selection-below-join"),
+    *NORMALISING[6:],
+)
+"""The same with selections moved into the inputs of joins first, so that a filtered input may turn out to filter only."""
+
 _MOST_STEPS = 150
 
 
@@ -69,8 +81,36 @@ class Normal:
     why: str = ""
 
 
+def normal_pair(
+    formulations: tuple[Formulation, Formulation],
+    catalog: Catalog,
+    names: tuple[str, str] = ("A", "B"),
+    seconds: float = 5.0,
+    cancel: threading.Event | None = None,
+) -> tuple[Normal, Normal, bool]:
+    """Normal forms of both sides and whether they are one: each side is tried in two ways, and any two may meet."""
+    tried: tuple[list[Normal], list[Normal]] = ([], [])
+    ends = time.monotonic() + seconds
+    for rules in (NORMALISING, PUSHING):
+        left = ends - time.monotonic()
+        if rules is PUSHING and (left <= 0 or (cancel is not None and cancel.is_set())):
+            break
+        for found, formulation, side in zip(tried, formulations, names, strict=True):
+            found.append(normal_form(formulation, catalog, side, max(left, 0.1) / 2, cancel, rules))
+        for first in tried[0]:
+            for second in tried[1]:
+                if first.text is not None and first.text == second.text:
+                    return first, second, True
+    return tried[0][0], tried[1][0], False
+
+
 def normal_form(
-    formulation: Formulation, catalog: Catalog, side: str, seconds: float = 5.0, cancel: threading.Event | None = None
+    formulation: Formulation,
+    catalog: Catalog,
+    side: str,
+    seconds: float = 5.0,
+    cancel: threading.Event | None = None,
+    rules: Sequence[Rule] = NORMALISING,
 ) -> Normal:
     """Brings a formulation to its normal form. Order by the answer itself is left to the caller: the text is of a bag."""
     facts = Facts(catalog)
@@ -78,7 +118,7 @@ def normal_form(
     steps: list[ProofStep] = []
     current = _simplified(formulation, facts, steps, side)
     while len(steps) < _MOST_STEPS and time.monotonic() < ends and not (cancel is not None and cancel.is_set()):
-        offer = _next(current, facts)
+        offer = _next(current, facts, rules)
         if offer is None:
             simpler = _simplified(current, facts, steps, side)
             if simpler is current:
@@ -115,10 +155,10 @@ def _simplified(formulation: Formulation, facts: Facts, steps: list[ProofStep], 
     return replace(formulation, outputs=(replace(output, operator=root),), names={}, aliases={}, spans={})
 
 
-def _next(current: Formulation, facts: Facts) -> Offer | None:
+def _next(current: Formulation, facts: Facts, rules: Sequence[Rule]) -> Offer | None:
     context = Context(current, facts)
     operators = current.operators()
-    for rule in NORMALISING:
+    for rule in rules:
         for operator in operators:
             for answer in attempts(context, operator, [rule]):
                 if isinstance(answer, Offer):

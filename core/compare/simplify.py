@@ -134,6 +134,8 @@ def true_part(condition: Scalar) -> Scalar:
             return true_part(term)
         case IsTruth(term=term, value=False):
             return true_part(Not(term))
+        case Comparison(operator=operator, left=left, right=right) if operator in _REFLEXIVE and left == right:
+            return condition if volatile(left) else Not(IsNull(left))
         case Comparison(operator=ComparisonOperator.NOT_DISTINCT, left=left, right=right):
             if not (can_be_null(left, ()) and can_be_null(right, ())):
                 return Comparison(ComparisonOperator.EQUAL, left, right)
@@ -164,6 +166,7 @@ def _without_default(operator: ComparisonOperator, call: Call, other: Scalar) ->
     return disjunction((plain, IsNull(term))) if truth else plain
 
 
+_REFLEXIVE = (ComparisonOperator.EQUAL, ComparisonOperator.AT_MOST, ComparisonOperator.AT_LEAST)
 _NULL_SAFE = (ComparisonOperator.DISTINCT, ComparisonOperator.NOT_DISTINCT)
 
 
