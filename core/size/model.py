@@ -75,7 +75,9 @@ def figure(value: float) -> str:
     """A number as it stands in a derivation: enough digits to follow the arithmetic."""
     if value == int(value) and abs(value) < 1e15:
         return str(int(value))
-    return f"{value:.6g}"
+    text = f"{value:.6g}"
+    # A share just below one is not one: what is left of it (1 - share) may be all that matters.
+    return f"{value:.12g}" if text == "1" else text
 
 
 _SHOWN = 12
