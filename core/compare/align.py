@@ -7,7 +7,7 @@ from dataclasses import dataclass
 from core.algebra.formulation import Formulation
 from core.algebra.graph import postorder
 from core.algebra.operators import Operator, Relation
-from core.compare.canonical import part_key
+from core.compare.parts import kept_key
 
 
 @dataclass(frozen=True, slots=True)
@@ -22,13 +22,13 @@ def align(a: Formulation, b: Formulation) -> Alignment:
     """Pairs operators: the same sub-plans first, then those of one kind over the same relations, the root last of all."""
     keys_b: dict[str, list[Operator]] = {}
     for operator in b.operators():
-        key = part_key(operator)
+        key = kept_key(operator)
         if key is not None:
             keys_b.setdefault(key, []).append(operator)
     same: list[tuple[Operator, Operator]] = []
     used: set[Operator] = set()
     for operator in a.operators():
-        key = part_key(operator)
+        key = kept_key(operator)
         twin = next((o for o in keys_b.get(key or "", ()) if o not in used and type(o) is type(operator)), None)
         twin = twin or next((o for o in keys_b.get(key or "", ()) if o not in used), None)
         if twin is not None:

@@ -6,7 +6,7 @@ from collections.abc import Iterator
 
 from core.algebra.graph import postorder
 from core.algebra.operators import Operator, Relation, Values
-from core.compare.canonical import part_key
+from core.compare.parts import kept_key
 from core.finding.model import Finding, View
 from core.size.numbers import rows_text
 
@@ -17,7 +17,7 @@ def find(view: View) -> Iterator[Finding]:
     for operator in reversed(view.formulation.operators()):
         if operator in inside or isinstance(operator, (Relation, Values)) or len(postorder(operator)) < 3:
             continue
-        key = part_key(operator)
+        key = kept_key(operator)
         if key is None:
             continue
         first = seen.setdefault(key, operator)

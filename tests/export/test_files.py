@@ -34,7 +34,10 @@ def drawing(wide: float = 200.0, high: float = 100.0) -> DisplayList:
 
 @pytest.mark.parametrize("ending", ENDINGS)
 @settings(max_examples=25, deadline=None, suppress_health_check=[HealthCheck.function_scoped_fixture])
-@given(payload=st.binary(min_size=1, max_size=3000) | st.sampled_from([b"endstream endobj\n" * 9, b"]]></metadata>", b"\r\n\r\n"]))
+@given(
+    payload=st.binary(min_size=1, max_size=3000)
+    | st.sampled_from([b"endstream endobj\n" * 9, b"]]></metadata>", b"\r\n\r\n"])
+)
 def test_any_bytes_travel_in_a_drawing(qtbot: QtBot, tmp_path: Path, ending: str, payload: bytes) -> None:
     target = tmp_path / f"x{ending}"
     export(drawing(), PRINT, target, payload)
@@ -84,7 +87,9 @@ def test_an_image_that_would_be_too_large_leaves_the_old_file(qtbot: QtBot, tmp_
 
 
 @pytest.mark.parametrize(("wide", "high", "points"), [(200, 100, (150, 75)), (40_000, 20_000, (14_400, 7_200))])
-def test_a_pdf_page_is_the_drawing(qtbot: QtBot, tmp_path: Path, wide: float, high: float, points: tuple[int, int]) -> None:
+def test_a_pdf_page_is_the_drawing(
+    qtbot: QtBot, tmp_path: Path, wide: float, high: float, points: tuple[int, int]
+) -> None:
     """One unit is 0.75 point; no side is longer than 14,400 points, the limit of ISO 32000-1, annex C."""
     target = tmp_path / "x.pdf"
     export(drawing(wide, high), PRINT, target)
