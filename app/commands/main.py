@@ -7,15 +7,27 @@ Exit status: 0 fine, 1 different or findings above the asked level, 2 usage, 3 i
 from __future__ import annotations
 
 import argparse
+import io
+import math
 import os
 import sys
 import traceback
+from difflib import get_close_matches
 from pathlib import Path
 
-from app.commands.inputs import Ground, InputError, counts_of, ground_of, query_of
+from app.commands.inputs import Ground, InputError, counts_of, ground_of, query_of, write_text
 
 FINE, DIFFERENT, USAGE, UNREADABLE, UNDECIDED, FAULT, INTERRUPTED = 0, 1, 2, 3, 4, 5, 130
 COMMANDS = ("read", "draw", "compare", "findings", "improve", "write", "profile")
+_QUERY = "a file of SQL, a sheet (plans.planimeter, plans.planimeter:B), or - for standard input"
+
+
+def _amount(text: str) -> float:
+    """A number that is not negative."""
+    number = float(text)
+    if not math.isfinite(number) or number < 0:
+        raise argparse.ArgumentTypeError(f"a number that is not negative is wanted, not {text}")
+    return number
 
 
 def _common() -> argparse.ArgumentParser:
@@ -39,10 +51,10 @@ def parser() -> argparse.ArgumentParser:
     commands = top.add_subparsers(dest="command", metavar="COMMAND")
     common = [_common()]
     made = commands.add_parser("read", parents=common, help="the tree as text, with sizes")
-    made.add_argument("query")
+    made.add_argument("query", help=_QUERY)
     made.add_argument("--measure", action="store_true", help="count the rows of every operator in the data")
     made = commands.add_parser("draw", parents=common, help="the sheet as SVG, PDF or PNG")
-    made.add_argument("query")
+    made.add_argument("query", help=_QUERY)
     made.add_argument("other", nargs="?", help="a second query, drawn beside the first")
     made.add_argument("-o", "--out", required=True, metavar="FILE", help="a name ending in .svg, .pdf or .png")
     made.add_argument("--measure", action="store_true", help="count the rows of every operator in the data")
@@ -51,25 +63,29 @@ def parser() -> argparse.ArgumentParser:
     made = commands.add_parser(
         "compare", parents=common, help="whether two queries are equal: a proof, or data on which they differ"
     )
-    made.add_argument("a")
-    made.add_argument("b")
-    made.add_argument("--seconds", type=float, default=10.0, help="how long to look for a difference (default: 10)")
+    made.add_argument("a", help=_QUERY)
+    made.add_argument("b", help="the other query")
+    made.add_argument("--seconds", type=_amount, default=10.0, help="how long to look for a difference (default: 10)")
     made.add_argument("--witness", metavar="FILE", default="", help="write the data on which they differ as SQL")
     made = commands.add_parser("findings", parents=common, help="defects and dangers, the most work first")
-    made.add_argument("query")
+    made.add_argument("query", help=_QUERY)
     made.add_argument("--measure", action="store_true", help="count the rows of every operator in the data")
     made.add_argument(
-        "--above", type=float, default=None, metavar="ROWS", help="exit with 1 if a finding causes more rows than this"
+        "--above",
+        type=_amount,
+        default=None,
+        metavar="ROWS",
+        help="exit with 1 if a finding causes more rows than this",
     )
     made = commands.add_parser("improve", parents=common, help="a better formulation, and why")
-    made.add_argument("query")
-    made.add_argument("--seconds", type=float, default=5.0, help="how long to search (default: 5)")
+    made.add_argument("query", help=_QUERY)
+    made.add_argument("--seconds", type=_amount, default=5.0, help="how long to search (default: 5)")
     made.add_argument("--to", default="", metavar="DIALECT", help="the dialect of the SQL printed")
     made = commands.add_parser("write", parents=common, help="the query's SQL in another dialect")
-    made.add_argument("query")
+    made.add_argument("query", help=_QUERY)
     made.add_argument("--to", required=True, metavar="DIALECT", help="any dialect of sqlglot")
     made = commands.add_parser("profile", parents=common, help="a catalog file from data")
-    made.add_argument("source")
+    made.add_argument("source", help="a folder, a DuckDB file or a data file; read only")
     made.add_argument("-o", "--out", required=True, metavar="FILE", help="the catalog file (.toml)")
     return top
 
@@ -77,13 +93,14 @@ def parser() -> argparse.ArgumentParser:
 def read(asked: argparse.Namespace) -> int:
     from app.commands.output import print_caution, print_json, size_text, tree_document
     from core.algebra.notation import tree_text
+    from core.drawing.page import CAUTION
     from core.size import size
 
     ground = ground_of(asked)
     formulation = query_of(asked.query, asked, ground)
     sizes = size(formulation, ground.catalog, counts_of(formulation, asked, ground))
     if asked.json:
-        print_json({"operators": tree_document(formulation, sizes)})
+        print_json({"operators": tree_document(formulation, sizes), "caution": CAUTION})
         return FINE
     print(tree_text(formulation.root, facts=lambda operator: size_text(sizes[operator])))
     print_caution()
@@ -91,37 +108,11 @@ def read(asked: argparse.Namespace) -> int:
 
 
 def draw(asked: argparse.Namespace) -> int:
-    os.environ.setdefault("QT_QPA_PLATFORM", "offscreen" if not _has_screen() else "")
-    if not os.environ["QT_QPA_PLATFORM"]:
-        del os.environ["QT_QPA_PLATFORM"]
-    from dataclasses import replace
+    if not _has_screen():
+        os.environ.setdefault("QT_QPA_PLATFORM", "offscreen")
+    from app.commands.drawing import draw_sheet
 
-    from app.export.files import ExportError, export
-    from app.model import Workbench
-    from app.window import application
-    from core.drawing.palette import PALETTES
-    from core.sheet import edit
-    from core.sheet.document import new_sheet
-
-    ground = ground_of(asked)
-    names = [asked.query, *([asked.other] if asked.other else [])]
-    formulations = [query_of(name, asked, ground) for name in names]
-    application()
-    title = asked.title or (Path(asked.query).stem if asked.query != "-" else "Query plan")
-    sheet = new_sheet(title, ground.catalog, asked.data)
-    counts = {}
-    for letter, name, formulation in zip("AB", names, formulations, strict=False):
-        text = formulation.text
-        label = Path(name).stem if name != "-" else ""
-        sheet = edit.with_text(sheet, letter, text, formulation.dialect, label)
-        draft = sheet.draft(letter)
-        if draft is not None and draft.formulation is not None:
-            counts.update(counts_of(draft.formulation, asked, ground))
-    bench = Workbench(replace(sheet, measured=counts))
-    try:
-        export(bench.page(), PALETTES[asked.palette], asked.out, bench.payload())
-    except (ExportError, OSError) as error:
-        raise InputError(str(error)) from error
+    draw_sheet(asked)
     print(asked.out)
     return FINE
 
@@ -145,12 +136,15 @@ def compare(asked: argparse.Namespace) -> int:
     else:
         print_verdict(verdict)
     if asked.witness and verdict.witness is not None:
-        Path(asked.witness).write_text(verdict.witness.sql(), encoding="utf-8")
+        write_text(asked.witness, verdict.witness.sql())
+    elif asked.witness:
+        print(f"note: there is no witness; {asked.witness} is not written", file=sys.stderr)
     return {Kind.EQUAL: FINE, Kind.DIFFERENT: DIFFERENT}.get(verdict.kind, UNDECIDED)
 
 
 def findings(asked: argparse.Namespace) -> int:
     from app.commands.output import print_caution, print_json
+    from core.drawing.page import CAUTION
     from core.finding import findings as find
     from core.size import size
     from core.size.numbers import rows_text
@@ -161,20 +155,19 @@ def findings(asked: argparse.Namespace) -> int:
     found = find(formulation, ground.catalog, sizes)
     if asked.json:
         operators = formulation.operators()
-        print_json(
-            [
-                {
-                    "finding": f.kind,
-                    "operator": operators.index(f.operator),
-                    "sentence": f.sentence,
-                    "rows": f.work,
-                    "evidence": f.evidence.word,
-                    "rewrite": None if f.offer is None else f.offer.rule.name,
-                    "why_not": f.why_not,
-                }
-                for f in found
-            ]
-        )
+        listed = [
+            {
+                "finding": f.kind,
+                "operator": operators.index(f.operator),
+                "sentence": f.sentence,
+                "rows": f.work,
+                "evidence": f.evidence.word,
+                "rewrite": None if f.offer is None else f.offer.rule.name,
+                "why_not": f.why_not,
+            }
+            for f in found
+        ]
+        print_json({"findings": listed, "caution": CAUTION})
     else:
         for f in found:
             cure = (
@@ -196,8 +189,8 @@ def findings(asked: argparse.Namespace) -> int:
 
 
 def improve(asked: argparse.Namespace) -> int:
-    from app.commands.output import print_caution, print_json
-    from core.language.sql.write import write_sql
+    from app.commands.output import print_caution, print_json, written_sql
+    from core.drawing.page import CAUTION
     from core.rewrite.improve import improve as search
     from core.size.numbers import ratio_text, rows_text
 
@@ -205,7 +198,7 @@ def improve(asked: argparse.Namespace) -> int:
     formulation = query_of(asked.query, asked, ground)
     chain = search(formulation, ground.catalog, asked.seconds)
     best = chain[-1].formulation if chain else formulation
-    sql = write_sql(best, asked.to or asked.dialect)
+    sql = written_sql(best, asked.to or asked.dialect)
     if asked.json:
         steps = [
             {
@@ -217,7 +210,7 @@ def improve(asked: argparse.Namespace) -> int:
             }
             for s in chain
         ]
-        print_json({"revisions": steps, "sql": sql})
+        print_json({"revisions": steps, "sql": sql, "caution": CAUTION})
         return FINE
     if not chain:
         print("-- no offered rewrite lowers the total of rows")
@@ -227,22 +220,15 @@ def improve(asked: argparse.Namespace) -> int:
         )
         print(f"-- {i}  {step.offer.rule.title}: {step.offer.what}\n--    {effect}")
     print(sql)
-    print_caution()
+    print_caution("-- ")
     return FINE
 
 
 def write(asked: argparse.Namespace) -> int:
-    from app.commands.output import print_json
-    from core.language.sql.write import WriteError, write_sql
+    from app.commands.output import print_json, written_sql
 
     ground = ground_of(asked)
-    formulation = query_of(asked.query, asked, ground)
-    try:
-        sql = write_sql(formulation, asked.to)
-    except WriteError as error:
-        raise InputError(str(error)) from error
-    except ValueError as error:
-        raise InputError(f"--to {asked.to}: {error}") from error
+    sql = written_sql(query_of(asked.query, asked, ground), asked.to)
     if asked.json:
         print_json({"dialect": asked.to, "sql": sql})
     else:
@@ -255,7 +241,7 @@ def profile(asked: argparse.Namespace) -> int:
     from core.catalog.files import save_catalog
 
     asked.data = asked.source
-    ground = ground_of(asked)
+    ground = ground_of(asked, afresh=True)
     try:
         save_catalog(ground.catalog, asked.out)
     except OSError as error:
@@ -283,29 +269,50 @@ _RUN = {
 def main(arguments: list[str] | None = None) -> int:
     """Runs a command and gives its exit status."""
     given = sys.argv[1:] if arguments is None else arguments
-    if not given or (given[0] not in COMMANDS and not given[0].startswith("-")):
-        from app.window import run
-
-        return run(given)
+    for stream in (sys.stdout, sys.stderr):  # the signs of the algebra go out whatever the locale
+        if isinstance(stream, io.TextIOWrapper) and stream.encoding.lower().replace("-", "") != "utf8":
+            stream.reconfigure(encoding="utf-8")
     try:
+        if not given or (given[0] not in COMMANDS and not given[0].startswith("-")):
+            return _window(given)
         asked = parser().parse_args(given)
+        if asked.command is None:
+            parser().print_help()
+            return USAGE
+        if [value for value in vars(asked).values() if isinstance(value, str)].count("-") > 1:
+            print("planimeter: standard input can be read only once", file=sys.stderr)
+            return USAGE
+        status = _RUN[asked.command](asked)
+        sys.stdout.flush()
+        return status
     except SystemExit as leaving:
         return int(leaving.code or 0)
-    if asked.command is None:
-        parser().print_help()
-        return USAGE
-    try:
-        return _RUN[asked.command](asked)
     except InputError as error:
         print(str(error), file=sys.stderr)
         return UNREADABLE
     except KeyboardInterrupt:
         return INTERRUPTED
     except BrokenPipeError:
-        sys.stderr.close()
+        # Whoever read the output has had enough; what is left in the buffer goes nowhere.
+        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
         return FINE
     except Exception:
         return _fault()
+
+
+def _window(files: list[str]) -> int:
+    """Opens the window, unless a file is missing or there is no screen."""
+    for name in files:
+        if not Path(name).exists():
+            guess = get_close_matches(name, COMMANDS, n=1)
+            hint = f"; did you mean the command {guess[0]}?" if guess and name == files[0] else ""
+            print(f"{name}: there is neither such a file nor such a command{hint}", file=sys.stderr)
+            return USAGE if hint else UNREADABLE
+    if not _has_screen():
+        raise InputError("there is no screen for the window; planimeter --help lists the commands that need none")
+    from app.window import run
+
+    return run(files)
 
 
 def _fault() -> int:

@@ -3,11 +3,13 @@
 from __future__ import annotations
 
 import json
+import math
 from collections.abc import Iterable, Mapping, Sequence
 from datetime import date, datetime, time, timedelta
 from decimal import Decimal
 from typing import Any
 
+from app.commands.inputs import InputError
 from core.algebra.formulation import Formulation
 from core.algebra.notation import condition_text, name_of, sign
 from core.algebra.operators import Operator
@@ -23,12 +25,24 @@ def size_text(size: Size) -> str:
     return f"[{rows_text(size.rows)} rows {size.evidence.word}, {rows_text(size.low)}..{high}{measured}]"
 
 
-def print_caution() -> None:
-    print(f"\n{CAUTION}")
+def print_caution(lead: str = "") -> None:
+    """The usual caution under sizes and rewrites; `lead` makes a comment of it."""
+    print(f"\n{lead}{CAUTION}")
 
 
 def print_json(document: object) -> None:
-    print(json.dumps(document, ensure_ascii=False, indent=2, default=_plain))
+    print(json.dumps(_finite(document), ensure_ascii=False, indent=2, allow_nan=False, default=_plain))
+
+
+def _finite(value: object) -> object:
+    """The document with numbers that JSON does not have (infinities, not a number) as text."""
+    if isinstance(value, float) and not math.isfinite(value):
+        return str(value)
+    if isinstance(value, Mapping):
+        return {key if isinstance(key, str) else str(key): _finite(part) for key, part in value.items()}
+    if isinstance(value, (list, tuple)):
+        return [_finite(part) for part in value]
+    return value
 
 
 def _plain(value: object) -> object:
@@ -139,3 +153,15 @@ def verdict_document(verdict: Verdict) -> dict[str, Any]:
         "instances": verdict.instances,
         "dialect": verdict.dialect,
     }
+
+
+def written_sql(formulation: Formulation, dialect: str) -> str:
+    """The formulation as SQL of a dialect. Raises `InputError` where that dialect has no way to say it, or is unknown."""
+    from core.language.sql.write import WriteError, write_sql
+
+    try:
+        return write_sql(formulation, dialect)
+    except WriteError as error:
+        raise InputError(str(error)) from error
+    except ValueError as error:
+        raise InputError(f"{dialect}: {error}") from error
