@@ -2,36 +2,12 @@
 
 from __future__ import annotations
 
-from collections import Counter
-from functools import cache
-
 import pytest
 
-from core.catalog.ddl import catalog_from_ddl
-from core.catalog.model import Catalog
-from core.engine.duckdb_engine import DuckEngine
-from core.engine.measure import measure
-from core.engine.profile import profile
-from core.finding import KINDS, Finding, findings
+from core.finding import KINDS
 from core.language.sql.read import read_sql
-from core.language.sql.write import write_sql
-from core.rewrite.improve import total_rows
-from core.size import size
 from tests.data import demo
-
-
-@cache
-def ground() -> tuple[Catalog, DuckEngine]:
-    engine = DuckEngine.over_folder(demo.folder(1.0))
-    return profile(engine, catalog_from_ddl(demo.schema()))[0], engine
-
-
-@cache
-def found(text: str) -> tuple[Finding, ...]:
-    catalog, _ = ground()
-    formulation = read_sql(text, catalog)
-    return tuple(findings(formulation, catalog, size(formulation, catalog)))
-
+from tests.finding.ground import bag, bag_of, found, ground, measured_rows
 
 # What assets/demo/README.md says goes wrong in each query.
 PLANTED = {
@@ -95,20 +71,12 @@ def test_they_are_ordered_by_work_and_speak() -> None:
 
 @pytest.mark.parametrize("name", sorted(demo.queries()))
 def test_a_cure_keeps_the_bag_and_adds_no_work(name: str) -> None:
-    catalog, engine = ground()
     text = demo.queries()[name]
-    cured = [f for f in found(text) if f.offer is not None]
-    if not cured:
-        return
-    before = Counter(map(repr, engine.run(text).rows))
-    formulation = read_sql(text, catalog)
-    measured = total_rows(formulation, size(formulation, catalog, measure(formulation, engine)[0]))
-    for finding in cured:
-        assert finding.offer is not None
-        after = finding.offer.after
-        assert Counter(map(repr, engine.run(write_sql(after)).rows)) == before, finding.kind
-        work = total_rows(after, size(after, catalog, measure(after, engine)[0]))
-        assert work <= measured * 1.001, (finding.kind, measured, work)
+    for finding in found(text):
+        if finding.offer is not None:
+            assert bag(finding.offer.after) == bag_of(text), finding.kind
+            before, after = measured_rows(read_sql(text, ground()[0])), measured_rows(finding.offer.after)
+            assert after <= before * 1.001, (finding.kind, before, after)
 
 
 def test_every_kind_is_found_somewhere() -> None:
