@@ -371,6 +371,17 @@ def test_only_drawing_loads_qt(command: str, tmp_path: Path) -> None:
     assert done.returncode == 0, done.stderr
 
 
+def test_the_readme_shows_what_is_printed(capsys: pytest.CaptureFixture[str], monkeypatch: pytest.MonkeyPatch) -> None:
+    """Where this fails because a command says something else now, and rightly, the README is to be brought up to date."""
+    monkeypatch.chdir(ROOT / "assets" / "demo")
+    text = (ROOT / "README.md").read_text(encoding="utf-8")
+    blocks = re.findall(r"```console\n\$ planimeter (.*?)\n(.*?)```", text, re.DOTALL)
+    assert len(blocks) >= 2
+    for command, printed in blocks:
+        main(command.split())
+        assert out(capsys) == printed
+
+
 def test_the_readme_knows_every_command_option_rule_and_finding() -> None:
     from core.finding import KINDS
     from core.rewrite import RULES
