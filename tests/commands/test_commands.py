@@ -401,3 +401,16 @@ def test_the_readme_knows_every_command_option_rule_and_finding() -> None:
         source = Path(kind.__code__.co_filename).read_text(encoding="utf-8")
         names = re.findall(r'Finding\(\s*"([^"]+)"', source)
         assert names and all(name in text for name in names), names
+
+
+def test_the_readme_gives_actions_of_the_window_their_shortcuts() -> None:
+    from app.actions import ENTRIES
+
+    text = re.sub(r"\s+", " ", (ROOT / "README.md").read_text(encoding="utf-8"))
+    shortcuts = {entry.name.rstrip("…"): entry.shortcut for entry in ENTRIES}
+    named = re.findall(r"\*([A-Z][^*]+)\* \((Ctrl[^)]+)\)", text)
+    assert len(named) >= 5
+    for name, shortcut in named:
+        assert shortcuts[name] == shortcut
+    for shortcut in re.findall(r"Ctrl\+[A-Z](?![a-z])", text):
+        assert shortcut in shortcuts.values(), shortcut
