@@ -4,14 +4,13 @@ from __future__ import annotations
 
 import threading
 import time
-from collections.abc import Callable, Mapping
+from collections.abc import Callable, Collection, Iterator, Mapping
 from dataclasses import dataclass
 
 from core.algebra.formulation import Formulation
-from core.algebra.graph import dependent, inputs, postorder
+from core.algebra.graph import dependent, inputs, postorder, produced
 from core.algebra.notation import qualified, tree_text
 from core.algebra.operators import Join, Operator, Relation
-from core.algebra.scalars import Attribute
 from core.catalog.model import Catalog
 from core.derive.facts import Facts
 from core.rewrite import RULES, attempts
@@ -19,23 +18,15 @@ from core.rewrite.context import Context
 from core.rewrite.rule import Offer
 from core.size import Size, size
 
-_IDLE = frozenset(
-    {
-        "split-selection",
-        "commute-join",
-        "distinct-to-group",
-        "group-to-distinct",
-        "semi-join-to-join",
-        "selection-out-of-join",
-    }
-)
-"""Rules that only make room for others; the search does not take them on their own."""
-
 _TIDYING = frozenset(
     {"count-distinct-to-count", "drop-distinct", "drop-sort", "union-to-union-all", "drop-identity-projection"}
 )
 
 _SETTLING = 1e-6
+"""The share by which a total must fall to count as lower."""
+
+_DETOUR = 4
+"""The most steps of a detour: rewrites that pay only together, such as a selection pushed past two operators."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -79,28 +70,89 @@ def improve(
     cancel: threading.Event | None = None,
     progress: Callable[[float, str], None] | None = None,
 ) -> list[Revision]:
-    """The chain of rewrites that lowers the total of rows most, found step by step; empty where none does.
+    """A chain of rewrites that lowers the total of rows, found step by step; empty where none is found.
 
-    Each step takes the best of all offers; steps that only tidy are taken where they cost nothing, and dropped from the
-    end where nothing follows. Stops at the time limit, or soon after `cancel` is set.
+    Each step is the best of all offers. Where no single step pays, a detour of a few rewrites that pay together is
+    looked for. At the end, what has become needless is dropped. Stops at the time limit, or soon after `cancel` is set.
     """
-    facts = Facts(catalog)
-    ends = time.monotonic() + seconds
+    search = _Search(Facts(catalog), time.monotonic() + seconds, cancel)
     chain: list[Revision] = []
-    current, cost = formulation, total_rows(formulation, size(formulation, catalog, facts=facts))
-    seen = {_text(current)}
-    while time.monotonic() < ends and not (cancel is not None and cancel.is_set()):
-        best = _best_step(current, cost, facts, seen, ends, cancel)
-        if best is None:
+    current, cost = formulation, search.cost(formulation)
+    while not search.over():
+        step = search.best_step(current, cost)
+        steps = [step] if step is not None else search.best_detour(current, cost)
+        if not steps:
             break
-        chain.append(best)
-        current, cost = best.formulation, best.after
-        seen.add(_text(current))
+        chain += steps
+        current, cost = chain[-1].formulation, chain[-1].after
         if progress is not None:
-            progress(min(0.99, 1 - max(0.0, ends - time.monotonic()) / seconds), f"{len(chain)} rewrites")
-    while chain and chain[-1].after >= chain[-1].before * (1 - _SETTLING):
-        chain.pop()
-    return chain + _tidied(chain[-1].formulation if chain else formulation, cost, facts) if chain else chain
+            progress(min(0.99, 1 - search.left() / seconds), f"{len(chain)} rewrites")
+    return chain + _tidied(current, cost, search.facts) if chain else chain
+
+
+@dataclass(frozen=True, slots=True)
+class _Search:
+    """What a search goes by: the facts, and when it has to end."""
+
+    facts: Facts
+    ends: float
+    cancel: threading.Event | None
+
+    def left(self) -> float:
+        """Seconds that remain."""
+        return max(0.0, self.ends - time.monotonic())
+
+    def over(self) -> bool:
+        return self.left() == 0 or (self.cancel is not None and self.cancel.is_set())
+
+    def cost(self, formulation: Formulation) -> float:
+        return total_rows(formulation, size(formulation, self.facts.catalog, facts=self.facts))
+
+    def offered(
+        self, current: Formulation, cost: float, places: Collection[Operator] | None = None
+    ) -> Iterator[Revision]:
+        """Every offer with its total; `places` narrows it to these operators. Ends early when the time is over."""
+        context = Context(current, self.facts)
+        for operator in current.operators():
+            if places is not None and operator not in places:
+                continue
+            for answer in attempts(context, operator):
+                if self.over():
+                    return
+                if isinstance(answer, Offer):
+                    yield Revision(answer, cost, self.cost(answer.after))
+
+    def best_step(self, current: Formulation, cost: float) -> Revision | None:
+        """The offer that leaves the lowest total, if that is lower than now."""
+        best = min(self.offered(current, cost), key=lambda revision: revision.after, default=None)
+        return best if best is not None and best.after < cost * (1 - _SETTLING) else None
+
+    def best_detour(self, current: Formulation, cost: float) -> list[Revision]:
+        """A few rewrites that lower the total together though the first does not; empty where there are none."""
+        best: list[Revision] = []
+        old = frozenset(current.operators())
+        for first in self.offered(current, cost):
+            steps = self._followed(first, old, _text(current))
+            target = best[-1].after if best else cost
+            shorter = len(steps) < len(best) and steps[-1].after <= target * (1 + _SETTLING)
+            if shorter or steps[-1].after < target * (1 - _SETTLING):
+                best = steps
+        return best
+
+    def _followed(self, first: Revision, old: Collection[Operator], start: str) -> list[Revision]:
+        """A first step and the best ones after it, at what it changed, up to where the total is lowest."""
+        steps, seen = [first], {start, _text(first.formulation)}
+        while len(steps) < _DETOUR:
+            last = steps[-1]
+            places = frozenset(last.formulation.operators()).difference(old)
+            offers = sorted(self.offered(last.formulation, last.after, places), key=lambda revision: revision.after)
+            step = next((revision for revision in offers if _text(revision.formulation) not in seen), None)
+            if step is None:
+                break
+            steps.append(step)
+            seen.add(_text(step.formulation))
+        lowest = min(range(len(steps)), key=lambda i: steps[i].after)
+        return steps[: lowest + 1]
 
 
 def _tidied(current: Formulation, cost: float, facts: Facts) -> list[Revision]:
@@ -122,34 +174,8 @@ def _tidied(current: Formulation, cost: float, facts: Facts) -> list[Revision]:
     return found
 
 
-def _best_step(
-    current: Formulation, cost: float, facts: Facts, seen: set[str], ends: float, cancel: threading.Event | None
-) -> Revision | None:
-    context = Context(current, facts)
-    rules = [rule for rule in RULES if rule.name not in _IDLE]
-    best: Revision | None = None
-    for operator in current.operators():
-        if time.monotonic() > ends or (cancel is not None and cancel.is_set()):
-            break
-        for answer in attempts(context, operator, rules):
-            if not isinstance(answer, Offer):
-                continue
-            after = total_rows(answer.after, size(answer.after, facts.catalog, facts=facts))
-            if after > cost * (1 + _SETTLING) or (best is not None and after >= best.after):
-                continue
-            if _text(answer.after) not in seen:
-                best = Revision(answer, cost, after)
-    return best
-
-
 def _text(formulation: Formulation) -> str:
     """A text that two formulations share only where they are the same graph with the same identities."""
-    everything = [a for operator in postorder(*formulation.roots()) for a in _own(operator)]
+    everything = [a for operator in postorder(*formulation.roots()) for a in produced(operator)]
     naming = qualified(everything * 2)
     return "\n".join(tree_text(root, naming) for root in formulation.roots())
-
-
-def _own(operator: Operator) -> tuple[Attribute, ...]:
-    from core.algebra.graph import produced
-
-    return produced(operator)
