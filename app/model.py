@@ -104,14 +104,15 @@ class Workbench(QObject):
             return []
         return rewrites(formulation, operator, Facts(self.sheet.catalog))
 
-    def effect(self, offer: Offer) -> str:
-        """What a rewrite changes in the total of rows."""
-        formulation = self.draft.formulation if self.draft is not None else None
-        if formulation is None:
-            return ""
-        before = total_rows(formulation, self.sizes(formulation))
-        after = total_rows(offer.after, self.sizes(offer.after))
-        return ratio_text(before, after)
+    def totals(self, offer: Offer) -> tuple[float, float]:
+        """The total of rows before a rewrite of the active draft, and after it."""
+        draft = self.draft
+        assert draft is not None and draft.formulation is not None
+        return self.total(draft.formulation), self.total(offer.after)
+
+    def total(self, formulation: Formulation) -> float:
+        """The rows out of all operators."""
+        return total_rows(formulation, self.sizes(formulation))
 
     def alignment(self) -> Alignment | None:
         """How the first two drafts on the canvas correspond."""
@@ -135,10 +136,10 @@ class Workbench(QObject):
         dialect = draft.dialect if draft is not None else "duckdb"
         self.do(f"typing in {letter}", edit.with_text(self.sheet, letter, text, dialect), merge=True)
 
-    def apply(self, offer: Offer, choice: int = 0) -> None:
+    def apply(self, offer: Offer) -> None:
         """Applies a rewrite to the active draft and keeps the eye on its result."""
         self.selection = offer.became
-        self.do(offer.rule.title, edit.with_rewrite(self.sheet, self.active, offer, choice))
+        self.do(offer.rule.title, edit.with_rewrite(self.sheet, self.active, offer))
         self.announced.emit(f"{offer.rule.title}: {offer.what}")
 
     def choose_revision(self, letter: str, number: int) -> None:
@@ -306,9 +307,7 @@ class Workbench(QObject):
             return []
         rows = []
         for i in range(1, draft.current + 1):
-            before, after = (
-                total_rows(r.formulation, self.sizes(r.formulation)) for r in draft.revisions[i - 1 : i + 1]
-            )
+            before, after = (self.total(r.formulation) for r in draft.revisions[i - 1 : i + 1])
             revision = draft.revisions[i]
             rows.append((f"{draft.letter}{i}", f"{revision.title}: {revision.what}", ratio_text(before, after)))
         return rows
@@ -318,7 +317,7 @@ class Workbench(QObject):
         for draft in drafts:
             assert draft.formulation is not None
             sizes = self.sizes(draft.formulation)
-            totals.append(rows_text(total_rows(draft.formulation, sizes)))
+            totals.append(rows_text(self.total(draft.formulation)))
             moved.append(bytes_text(sum(s.bytes * s.best / max(s.rows, 1e-9) for s in sizes.values())))
         return [
             ("rows through all operators", " → ".join(totals)),

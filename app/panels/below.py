@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from html import escape
 
-from PySide6.QtCore import Qt, Signal
+from PySide6.QtCore import Qt
 from PySide6.QtWidgets import QTabWidget, QTextBrowser, QTreeWidget, QTreeWidgetItem, QVBoxLayout, QWidget
 
 from app.fonts import font
@@ -12,14 +12,11 @@ from app.model import Workbench
 from core.compare import Kind, Verdict
 from core.drawing.palette import LIGHT, Palette
 from core.finding import Finding
-from core.rewrite.improve import total_rows
 from core.size.numbers import ratio_text, rows_text
 
 
 class Below(QWidget):
     """Four lists in one strip."""
-
-    cured = Signal(object)
 
     def __init__(self, bench: Workbench) -> None:
         super().__init__()
@@ -111,7 +108,7 @@ class Below(QWidget):
         for draft in self.bench.sheet.drafts:
             before: float | None = None
             for i, revision in enumerate(draft.revisions):
-                total = total_rows(revision.formulation, self.bench.sizes(revision.formulation))
+                total = self.bench.total(revision.formulation)
                 change = "" if before is None else ratio_text(before, total)
                 text = revision.title + (f": {revision.what}" if revision.what else "")
                 item = QTreeWidgetItem([f"{draft.letter}{i}", text, rows_text(total), change])

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from html import escape
 
-from PySide6.QtCore import Qt, QUrl, Signal
+from PySide6.QtCore import Qt, QUrl
 from PySide6.QtWidgets import QLabel, QListWidget, QListWidgetItem, QPushButton, QTextBrowser, QVBoxLayout, QWidget
 
 from app.fonts import font
@@ -18,13 +18,11 @@ from core.derive.lineage import lineage_text
 from core.drawing.palette import LIGHT, Palette
 from core.rewrite import Offer, Refusal
 from core.size import Size
-from core.size.numbers import bytes_text, rows_text
+from core.size.numbers import bytes_text, ratio_text, rows_text
 
 
 class OperatorPanel(QWidget):
     """What is known of the selected operator, and what can be done there."""
-
-    applied = Signal(object)
 
     def __init__(self, bench: Workbench) -> None:
         super().__init__()
@@ -59,7 +57,6 @@ class OperatorPanel(QWidget):
         layout.addWidget(self.reason)
         layout.addWidget(self.button)
         self._answers: list[Offer | Refusal] = []
-        self._choices: list[int] = []
         bench.changed.connect(self.refresh)
         bench.selected.connect(self.refresh)
 
@@ -71,7 +68,7 @@ class OperatorPanel(QWidget):
     def refresh(self) -> None:
         operator, draft = self.bench.selection, self.bench.draft
         self.list.clear()
-        self._answers, self._choices = [], []
+        self._answers = []
         if operator is None or draft is None or draft.formulation is None:
             self.caption.setText("Rewrites here")
             self.text.setHtml(self._welcome())
@@ -92,19 +89,12 @@ class OperatorPanel(QWidget):
 
     def _list_answers(self, operator: Operator) -> None:
         answers = self.bench.answers(operator)
-        seen: dict[str, int] = {}
-        choices: dict[int, int] = {}
-        for answer in answers:
-            if isinstance(answer, Offer):
-                choices[id(answer)] = seen.get(answer.rule.name, 0)
-                seen[answer.rule.name] = choices[id(answer)] + 1
-        effects = {id(a): self.bench.effect(a) for a in answers if isinstance(a, Offer)}
+        totals = {id(a): self.bench.totals(a) for a in answers if isinstance(a, Offer)}
         # What saves most stands first, then what changes nothing, then what costs, then what is refused.
-        answers.sort(key=lambda a: _rank(effects.get(id(a))))
+        answers.sort(key=lambda a: _rank(totals.get(id(a))))
         for answer in answers:
-            choice = choices.get(id(answer), 0)
             if isinstance(answer, Offer):
-                effect = effects[id(answer)]
+                effect = ratio_text(*totals[id(answer)])
                 text = f"{answer.rule.title}   {'' if effect == '=' else effect + ' rows in all'}\n{answer.what}"
             else:
                 text = f"{answer.rule.title}\nrefused: {answer.reason}"
@@ -113,25 +103,22 @@ class OperatorPanel(QWidget):
                 item.setForeground(self.palette().placeholderText())
             item.setToolTip(answer.rule.law)
             self._answers.append(answer)
-            self._choices.append(choice)
             self.list.addItem(item)
         offered = sum(isinstance(a, Offer) for a in answers)
         self.caption.setText(f"Rewrites here: {offered} offered, {len(answers) - offered} refused")
         if answers:
             self.list.setCurrentRow(0)
 
-    def _current(self) -> tuple[Offer | Refusal, int] | None:
+    def _current(self) -> Offer | Refusal | None:
         row = self.list.currentRow()
-        return (self._answers[row], self._choices[row]) if 0 <= row < len(self._answers) else None
+        return self._answers[row] if 0 <= row < len(self._answers) else None
 
     def _explain(self) -> None:
-        found = self._current()
-        offer = found is not None and isinstance(found[0], Offer)
-        self.button.setEnabled(offer)
-        if found is None:
+        answer = self._current()
+        self.button.setEnabled(isinstance(answer, Offer))
+        if answer is None:
             self.reason.setText("")
             return
-        answer = found[0]
         lines = [answer.rule.law]
         for check in answer.checks:
             lines.append(f"{'holds' if check.passed else check.outcome}: {check.sentence}")
@@ -145,9 +132,9 @@ class OperatorPanel(QWidget):
         self.apply_current()
 
     def apply_current(self) -> None:
-        found = self._current()
-        if found is not None and isinstance(found[0], Offer):
-            self.bench.apply(found[0], found[1])
+        answer = self._current()
+        if isinstance(answer, Offer):
+            self.bench.apply(answer)
 
     def _clicked(self, url: QUrl) -> None:
         number = url.toString().removeprefix("operator:")
@@ -217,13 +204,13 @@ class OperatorPanel(QWidget):
         return f"<h4 style='margin-bottom:0'>Attributes</h4><p style='color:{soft}; margin-top:2px'>{escape(text)}</p><table cellspacing='0'>{rows}</table>"
 
 
-def _rank(effect: str | None) -> tuple[int, float]:
-    if effect is None:
+def _rank(totals: tuple[float, float] | None) -> tuple[int, float]:
+    if totals is None:
         return 3, 0.0
-    if effect == "=":
+    if ratio_text(*totals) == "=":
         return 1, 0.0
-    factor = float(effect[2:].rstrip("kMGTPE"))
-    return (0, -factor) if effect.startswith("÷") else (2, factor)
+    before, after = totals
+    return (0 if after < before else 2), after
 
 
 def _off(size: Size) -> str:

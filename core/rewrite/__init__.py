@@ -46,15 +46,17 @@ def attempts(
     found: list[Offer | Refusal] = []
     for rule in rules:
         answer = rule.bind(operator, context)
+        choice = 0
         for attempt in answer if isinstance(answer, list) else [] if answer is None else [answer]:
             if all(c.passed or c.name in disabled for c in attempt.checks):
-                found.append(_offer(rule, operator, attempt, context))
+                found.append(_offer(rule, operator, attempt, context, choice))
+                choice += 1
             else:
                 found.append(Refusal(rule, operator, attempt.checks, attempt.what, attempt.cautions))
     return found
 
 
-def _offer(rule: Rule, operator: Operator, attempt: Attempt, context: Context) -> Offer:
+def _offer(rule: Rule, operator: Operator, attempt: Attempt, context: Context, choice: int) -> Offer:
     built = attempt.build()
     changes = dict(built) if isinstance(built, Mapping) else {operator: built}
     became = changes.get(operator, operator)
@@ -66,4 +68,4 @@ def _offer(rule: Rule, operator: Operator, attempt: Attempt, context: Context) -
         after = context.formulation.replaced(changes)
     except IllegalFormulation as fault:
         raise RuleFault(f"rule {rule.name} built an illegal formulation: {fault}") from fault
-    return Offer(rule, operator, attempt.checks, attempt.what, after, became, attempt.cautions)
+    return Offer(rule, operator, attempt.checks, attempt.what, after, became, attempt.cautions, choice)

@@ -60,7 +60,10 @@ class Rule:
 
 @dataclass(frozen=True, slots=True)
 class Offer:
-    """A legal rewrite at an operator, with its result ready. `became` says what stands for the operator afterwards."""
+    """A legal rewrite at an operator, with its result ready. `became` says what stands for the operator afterwards.
+
+    `choice` is its number among what the rule offers at the operator, so that a document can name it.
+    """
 
     rule: Rule
     operator: Operator
@@ -69,6 +72,7 @@ class Offer:
     after: Formulation
     became: Operator
     cautions: tuple[str, ...] = ()
+    choice: int = 0
 
 
 @dataclass(frozen=True, slots=True)

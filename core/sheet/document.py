@@ -17,7 +17,10 @@ from core.rewrite import Offer
 
 @dataclass(frozen=True, slots=True)
 class Revision:
-    """A formulation after one more rewrite; the first is as written. `place` is the rewritten operator's number in it."""
+    """A formulation after one more rewrite; the first is as written.
+
+    `place` is the rewritten operator's number in the formulation before, `choice` that of the offer (`Offer.choice`).
+    """
 
     formulation: Formulation
     rule: str = ""
@@ -105,12 +108,12 @@ def new_sheet(title: str, catalog: Catalog, data: str = "") -> Sheet:
     return Sheet(title, author, date.today(), catalog, data)
 
 
-def rewritten(draft: Draft, offer: Offer, choice: int = 0) -> Draft:
+def rewritten(draft: Draft, offer: Offer) -> Draft:
     """The draft with one more revision; revisions after the current one are left behind."""
     formulation = draft.formulation
     assert formulation is not None
     place = formulation.operators().index(offer.operator)
-    revision = Revision(offer.after, offer.rule.name, offer.rule.title, offer.what, place, choice)
+    revision = Revision(offer.after, offer.rule.name, offer.rule.title, offer.what, place, offer.choice)
     return replace(draft, revisions=(*draft.revisions[: draft.current + 1], revision), current=draft.current + 1)
 
 

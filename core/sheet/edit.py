@@ -23,12 +23,12 @@ def with_text(sheet: Sheet, letter: str, text: str, dialect: str = "duckdb", tit
     return replace(sheet.with_draft(draft), callouts=kept)
 
 
-def with_rewrite(sheet: Sheet, letter: str, offer: Offer, choice: int = 0) -> Sheet:
+def with_rewrite(sheet: Sheet, letter: str, offer: Offer) -> Sheet:
     """The sheet after a rewrite; notes and measured counts follow their operators."""
     draft = sheet.draft(letter)
     assert draft is not None and draft.formulation is not None
     callouts = tuple(replace(c, operator=_kept(c.operator, offer)) if c.letter == letter else c for c in sheet.callouts)
-    return replace(sheet.with_draft(rewritten(draft, offer, choice)), callouts=callouts)
+    return replace(sheet.with_draft(rewritten(draft, offer)), callouts=callouts)
 
 
 def _kept(operator: Operator, offer: Offer) -> Operator:

@@ -123,7 +123,7 @@ def _opened(part: dict[str, Any], sheet: Sheet, measured: dict[Operator, int]) -
         return replace(draft, problems=error.diagnostics)
     draft = replace(draft, revisions=(Revision(formulation),))
     for step in part["revisions"][1:]:
-        draft = rewritten(draft, _again(draft, step, sheet), step["choice"])
+        draft = rewritten(draft, _again(draft, step, sheet))
     for revision, step in zip(draft.revisions, part["revisions"], strict=False):
         for operator, count in zip(revision.formulation.operators(), step["measured"], strict=False):
             if count is not None:
@@ -142,10 +142,10 @@ def _again(draft: Draft, step: dict[str, Any], sheet: Sheet) -> Offer:
     except (KeyError, IndexError) as error:
         raise SheetError(f"revision {draft.letter}{draft.current + 1}: {step['title']} is not known here") from error
     offers = [a for a in rewrites(formulation, operator, sheet.catalog, [rule]) if isinstance(a, Offer)]
-    if not offers:
+    offer = next((offer for offer in offers if offer.choice == step["choice"]), None)
+    if offer is None:
         raise SheetError(f"revision {draft.letter}{draft.current + 1}: {step['title']} is not legal with this catalog")
-    choice = int(step["choice"])
-    return offers[min(choice, len(offers) - 1)]
+    return offer
 
 
 def _noted(part: dict[str, Any], sheet: Sheet) -> Callout | None:

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterator
+from dataclasses import replace
 from pathlib import Path
 
 import pytest
@@ -12,12 +13,15 @@ from PySide6.QtWidgets import QFileDialog
 from pytestqt.qtbot import QtBot
 
 from app.export.files import carried
+from app.model import Workbench
 from app.window import Window, application
 from core.algebra.operators import Group, Join, JoinKind
 from core.catalog.ddl import catalog_from_ddl
+from core.catalog.model import Catalog
 from core.compare import Kind
 from core.engine.duckdb_engine import DuckEngine
 from core.engine.profile import profile
+from core.rewrite import Offer, Refusal
 from core.sheet import edit
 from core.sheet.document import Sheet, new_sheet
 from core.sheet.file import from_json
@@ -192,6 +196,27 @@ def test_measured_sizes_appear(qtbot: QtBot, window: Window) -> None:
     assert draft is not None and draft.formulation is not None
     sizes = window.bench.sizes(draft.formulation)
     assert all(size.measured is not None for size in sizes.values())
+
+
+def test_rewrites_that_save_most_stand_first_however_much_they_save(qtbot: QtBot) -> None:
+    """A product of large relations: the ratio has more than three figures."""
+    catalog = catalog_from_ddl("create table big (a integer, b integer); create table wide (a integer, b integer)")
+    large = Catalog({facts.name: replace(facts, rows=1_000_000) for facts in catalog})
+    text = "select big.b from big, wide where big.a = wide.a and big.b = 1"
+    made = Window(Workbench(edit.with_text(new_sheet("One", large), "A", text)), dark=False)
+    qtbot.addWidget(made)
+    formulation = made.bench.sheet.drafts[0].formulation
+    assert formulation is not None
+    most = 0.0
+    for operator in formulation.operators():
+        made.bench.select(operator, "A")
+        answers = made.panel._answers
+        assert len(answers) == len(made.bench.answers(operator))
+        offered = [made.bench.totals(a) for a in answers if isinstance(a, Offer)]
+        assert [after for _, after in offered] == sorted(after for _, after in offered)
+        assert all(isinstance(a, Refusal) for a in answers[len(offered) :])
+        most = max([most, *(before / max(after, 1.0) for before, after in offered)])
+    assert most >= 1000
 
 
 def test_a_disabled_action_says_why(window: Window) -> None:

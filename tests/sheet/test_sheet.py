@@ -52,6 +52,32 @@ def test_a_sheet_opens_as_it_was(tmp_path: Path) -> None:
     assert sorted(again.measured.values()) == list(range(len(operators)))
 
 
+def test_every_offer_is_opened_as_the_one_it_was() -> None:
+    """Several offers of one rule at one operator: the file names the one that was taken, whoever took it."""
+    text = "select r.a from r join t on r.a = t.a where r.c > 1 and t.a > 2"
+    sheet = edit.with_text(new_sheet("One", catalog_from_ddl(SCHEMA), ""), "A", text)
+    formulation = sheet.drafts[0].formulation
+    assert formulation is not None
+    offers = [
+        answer
+        for operator in formulation.operators()
+        for answer in rewrites(formulation, operator, sheet.catalog)
+        if isinstance(answer, Offer)
+    ]
+    assert any(offer.choice > 0 for offer in offers)
+    for offer in offers:
+        again = from_json(to_json(edit.with_rewrite(sheet, "A", offer))).drafts[0]
+        assert again.revisions[1].what == offer.what
+        assert tree_text(again.formulation.root) == tree_text(offer.after.root)  # type: ignore[union-attr]
+
+
+def test_an_offer_that_is_not_there_any_more_is_said() -> None:
+    document = json.loads(to_json(sheet_with_rewrites()))
+    document["drafts"][0]["revisions"][1]["choice"] = 99
+    with pytest.raises(SheetError, match="is not legal with this catalog"):
+        from_json(json.dumps(document))
+
+
 def test_no_half_file_is_left(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
     path = tmp_path / "one.planimeter"
     save(sheet_with_rewrites(0), path)
