@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import sys
+from dataclasses import replace
 from pathlib import Path
 
 from PySide6.QtCore import QMimeData, Qt, QTimer
@@ -39,13 +40,11 @@ from core.catalog.model import Catalog
 from core.compare import Verdict
 from core.drawing.page import CAUTION
 from core.drawing.palette import PALETTES
-from core.engine.duckdb_engine import EngineError
 from core.rewrite.improve import Revision as Step
-from core.sheet import edit
-from core.sheet.document import new_sheet
+from core.sheet import ENDING, edit
+from core.sheet.document import Sheet, new_sheet
 from core.sheet.file import SheetError, from_json
 
-SHEET_ENDING = ".planimeter"
 _DRAWINGS = "Drawings (*.svg *.pdf *.png)"
 
 
@@ -210,7 +209,7 @@ class Window(QMainWindow):
         return answer == QMessageBox.StandardButton.Discard
 
     def open_dialog(self) -> None:
-        filters = f"Sheets, drawings, queries, catalogs (*{SHEET_ENDING} *.svg *.pdf *.png *.sql *.toml)"
+        filters = f"Sheets, drawings, queries, catalogs (*{ENDING} *.svg *.pdf *.png *.sql *.toml)"
         path, _ = QFileDialog.getOpenFileName(self, "Open", "", filters)
         if path:
             self.open_path(Path(path))
@@ -224,7 +223,7 @@ class Window(QMainWindow):
                     self.complain(f"{path.name} carries no sheet")
                     return
                 self.bench.open(from_json(payload.decode()), None)
-            elif path.suffix.lower() == SHEET_ENDING:
+            elif path.suffix.lower() == ENDING:
                 self.bench.open_file(path)
             elif path.suffix.lower() == ".toml":
                 self._use_catalog(load_catalog(path))
@@ -249,8 +248,6 @@ class Window(QMainWindow):
         self.canvas.fit()
 
     def _use_catalog(self, catalog: Catalog) -> None:
-        from dataclasses import replace
-
         sheet = replace(self.bench.sheet, catalog=catalog, measured={})
         for draft in sheet.drafts:
             sheet = edit.with_text(sheet, draft.letter, draft.text, draft.dialect, draft.title)
@@ -264,8 +261,6 @@ class Window(QMainWindow):
             )
 
     def _demo_ready(self, sheet: object) -> None:
-        from core.sheet.document import Sheet
-
         assert isinstance(sheet, Sheet)
         self.bench.open(sheet, None)
         self.canvas.fit()
@@ -290,8 +285,6 @@ class Window(QMainWindow):
         declared = self.bench.sheet.catalog
 
         def then(result: Profiled) -> None:
-            from dataclasses import replace
-
             catalog, notes = result
             self.bench.history.amend(replace(self.bench.sheet, data=str(path)))
             self._use_catalog(catalog)
@@ -308,11 +301,11 @@ class Window(QMainWindow):
 
     def save_dialog(self) -> None:
         path, _ = QFileDialog.getSaveFileName(
-            self, "Save the sheet", f"{self.bench.sheet.title}{SHEET_ENDING}", f"Sheets (*{SHEET_ENDING})"
+            self, "Save the sheet", f"{self.bench.sheet.title}{ENDING}", f"Sheets (*{ENDING})"
         )
         if path:
             target = Path(path)
-            self._save(target if target.suffix else target.with_suffix(SHEET_ENDING))
+            self._save(target if target.suffix else target.with_suffix(ENDING))
 
     def _save(self, path: Path) -> None:
         try:
@@ -336,8 +329,6 @@ class Window(QMainWindow):
             self.complain(str(error))
 
     def title_dialog(self) -> None:
-        from dataclasses import replace
-
         title, accepted = QInputDialog.getText(self, "Name of the sheet", "Name", text=self.bench.sheet.title)
         if accepted and title.strip():
             self.bench.do("name of the sheet", replace(self.bench.sheet, title=title.strip()))
@@ -598,6 +589,3 @@ def run(paths: list[str]) -> int:
     else:
         QTimer.singleShot(0, window.open_demo)
     return made.exec()
-
-
-__all__ = ["EngineError", "Window", "application", "run"]

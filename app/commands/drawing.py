@@ -6,13 +6,14 @@ import argparse
 from dataclasses import replace
 from pathlib import Path
 
-from app.commands.inputs import SHEET_ENDING, Ground, InputError, counts_of, ground_of, names_sheet, query_of, sheet_of
+from app.commands.inputs import Ground, InputError, counts_of, ground_of, names_sheet, query_of, sheet_of
 from app.commands.output import written_sql
 from app.export.files import ExportError, export
 from app.model import Workbench
 from app.window import application
 from core.drawing.palette import PALETTES
 from core.language.sql.read import read_sql
+from core.sheet import ENDING
 from core.sheet.document import Draft, Revision, Sheet, new_sheet
 
 
@@ -34,7 +35,7 @@ def draw_sheet(asked: argparse.Namespace) -> None:
 
 def _drawn_sheet(asked: argparse.Namespace, ground: Ground) -> Sheet:
     """A whole sheet as it stands, or a new one of the given queries."""
-    if asked.query.endswith(SHEET_ENDING) and not asked.other:
+    if asked.query.endswith(ENDING) and not asked.other:
         sheet = sheet_of(asked.query, ground)
         return replace(sheet, catalog=ground.catalog, title=asked.title or sheet.title)
     names = [asked.query, *([asked.other] if asked.other else [])]

@@ -13,11 +13,10 @@ from core.algebra.formulation import Formulation
 from core.algebra.operators import Operator
 from core.catalog.model import Catalog
 from core.engine.duckdb_engine import DuckEngine
+from core.sheet import ENDING
 
 if TYPE_CHECKING:
     from core.sheet.document import Draft, Sheet
-
-SHEET_ENDING = ".planimeter"
 
 
 class InputError(Exception):
@@ -112,12 +111,12 @@ def query_of(name: str, asked: argparse.Namespace, ground: Ground) -> Formulatio
 
 def names_sheet(name: str) -> bool:
     """Whether a query is a sheet, or one formulation of it: plans.planimeter, plans.planimeter:B."""
-    return _parted(name)[0].endswith(SHEET_ENDING)
+    return _parted(name)[0].endswith(ENDING)
 
 
 def _parted(name: str) -> tuple[str, str]:
     file, colon, letter = name.rpartition(":")
-    return (file, letter) if colon and file.endswith(SHEET_ENDING) else (name, "")
+    return (file, letter) if colon and file.endswith(ENDING) else (name, "")
 
 
 def sheet_of(name: str, ground: Ground) -> Sheet:

@@ -18,8 +18,6 @@ decimals and times as text, restored by the attribute's type.
 from __future__ import annotations
 
 import json
-import os
-import tempfile
 import tomllib
 from collections.abc import Mapping
 from dataclasses import fields
@@ -42,6 +40,7 @@ from core.catalog.model import (
     Value,
     catalog_of,
 )
+from core.whole_file import write_whole
 
 FORMAT = "planimeter catalog 1"
 _RELATION_KEYS = (
@@ -69,15 +68,7 @@ def load_catalog(path: str | Path) -> Catalog:
 
 def save_catalog(catalog: Catalog, path: str | Path) -> None:
     """Writes the catalog so that a reader never sees half a file."""
-    target = Path(path)
-    handle, temporary = tempfile.mkstemp(dir=target.parent, prefix=target.name, suffix=".part")
-    try:
-        with os.fdopen(handle, "w", encoding="utf-8") as stream:
-            stream.write(catalog_to_toml(catalog))
-        os.replace(temporary, target)
-    except BaseException:
-        Path(temporary).unlink(missing_ok=True)
-        raise
+    write_whole(path, catalog_to_toml(catalog))
 
 
 # --- writing ---------------------------------------------------------------------------------------------------------

@@ -7,7 +7,7 @@ those that hold for the data as it is, and only they may enter a guaranteed rang
 from __future__ import annotations
 
 from collections.abc import Iterable, Iterator, Mapping
-from dataclasses import dataclass, field, replace
+from dataclasses import dataclass, field
 from datetime import date, datetime, time
 from decimal import Decimal
 from enum import IntEnum
@@ -130,10 +130,6 @@ class RelationFacts:
     def keys(self) -> tuple[tuple[str, ...], ...]:
         return (() if self.primary is None else (self.primary,)) + self.unique
 
-    def with_attribute(self, facts: AttributeFacts) -> RelationFacts:
-        """The relation with one attribute's facts exchanged."""
-        return replace(self, attributes=tuple(facts if a.name == facts.name else a for a in self.attributes))
-
 
 @dataclass(frozen=True)
 class Catalog:
@@ -164,11 +160,6 @@ class Catalog:
         if found is None and "." in folded:
             found = self.relations.get(folded.rpartition(".")[2])
         return found
-
-    def with_relations(self, relations: Iterable[RelationFacts]) -> Catalog:
-        """The catalog with relations added or exchanged."""
-        changed = {facts.name.lower(): facts for facts in relations}
-        return replace(self, relations={**self.relations, **changed})
 
 
 def catalog_of(relations: Iterable[RelationFacts]) -> Catalog:

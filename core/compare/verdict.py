@@ -83,11 +83,10 @@ def compare(
     first, second, met = normal_pair((a, b), catalog, names, seconds / 2, cancel)
     if met:
         # A proof speaks of meaning; both texts must also run.
-        problem = search(a, b, catalog, 0.0, names=names).notes
-        broken = [note for note in problem if "does not run" in note]
+        broken = search(a, b, catalog, 0.0, names=names).broken
         if not broken:
             return _equal(first, second, asides, rests, time.monotonic() - started, names)
-        return Verdict(Kind.NO_DIFFERENCE, tuple(broken), asides=asides, rests_on=rests, names=names)
+        return Verdict(Kind.NO_DIFFERENCE, (broken,), asides=asides, rests_on=rests, names=names)
     left = max(1.0, seconds - (time.monotonic() - started))
     return _searched(search(a, b, catalog, left, cancel, names=names), first, second, asides, rests, names)
 
@@ -113,17 +112,13 @@ def _equal(
 ) -> Verdict:
     a, b = names
     steps = (*first.steps, *second.steps)
-    reasons = []
-    if steps:
-        reasons.append(
-            f"{len(first.steps)} rewrites of {a} and {len(second.steps)} of {b} lead to the same normal form"
-        )
-    else:
-        reasons.append("the two have the same normal form: they differ in names and order of writing only")
-    last = ProofStep(f"{a} = {b}", "same normal form", "", "equal up to names and the order of inputs and conditions")
-    return Verdict(
-        Kind.EQUAL, tuple(reasons), (*steps, last), rests_on=rests, asides=asides, seconds=seconds, names=names
+    reason = (
+        f"{len(first.steps)} rewrites of {a} and {len(second.steps)} of {b} lead to the same normal form"
+        if steps
+        else "the two have the same normal form: they differ in names and order of writing only"
     )
+    last = ProofStep(f"{a} = {b}", "same normal form", "", "equal up to names and the order of inputs and conditions")
+    return Verdict(Kind.EQUAL, (reason,), (*steps, last), rests_on=rests, asides=asides, seconds=seconds, names=names)
 
 
 def _searched(
@@ -135,7 +130,7 @@ def _searched(
     names: tuple[str, str],
 ) -> Verdict:
     a, b = names
-    rests = (*rests, *(n for n in found.notes if "does not run" not in n))
+    rests = (*rests, *found.notes)
     if found.witness is not None:
         w = found.witness
         reason = (
@@ -143,7 +138,7 @@ def _searched(
             f"{len(w.only_a)} only in {a}, {len(w.only_b)} only in {b}"
         )
         return Verdict(Kind.DIFFERENT, (reason,), (), w, rests, asides, found.instances, found.seconds, names=names)
-    reasons = [note for note in found.notes if "does not run" in note]
+    reasons = [found.broken] if found.broken else []
     for side, normal in ((a, first), (b, second)):
         if normal.text is None:
             reasons.append(f"{side} has no normal form: {normal.why}")

@@ -48,13 +48,14 @@ class Witness:
 
 @dataclass(frozen=True, slots=True)
 class Search:
-    """What a search found, and how hard it looked."""
+    """What a search found, and how hard it looked. `broken` says why a side does not run at all."""
 
     witness: Witness | None
     instances: int
     most_rows: int
     seconds: float
     notes: tuple[str, ...] = ()
+    broken: str = ""
 
 
 def statement(formulation: Formulation) -> str:
@@ -184,7 +185,7 @@ def search(
     try:
         problem = trials.check(names)
         if problem:
-            return Search(None, 0, 0, 0.0, (*trials.notes, problem))
+            return Search(None, 0, 0, 0.0, tuple(trials.notes), problem)
         rng, pools = random.Random(seed), Pools((a, b))
         count, most = 0, 0
         while time.monotonic() - started < seconds and not (cancel is not None and cancel.is_set()):

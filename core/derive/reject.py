@@ -29,6 +29,7 @@ from core.algebra.scalars import (
     Scalar,
     conjuncts,
     parts,
+    refs,
 )
 
 NULL, TRUE, FALSE, VALUE = "null", "true", "false", "value"
@@ -55,8 +56,6 @@ def rejects_null_each(condition: Scalar, never_null: Collection[Attribute] = ())
 
 
 def _refs(term: Scalar) -> set[Attribute]:
-    from core.algebra.scalars import refs
-
     return set(refs(term))
 
 

@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Sequence
 from dataclasses import dataclass, field
 
-from core.drawing.display import ACCENT, INK, PAPER, SOFT, Box, DisplayList, Line, Shape, Text
+from core.drawing.display import ACCENT, INK, PAPER, SOFT, Box, Circle, DisplayList, Line, Shape, Text
 from core.drawing.metrics import cut, width, wrapped
 
 CAUTION = (
@@ -195,8 +195,6 @@ class _Tables:
             x += wide
 
     def _callouts(self, wide: float) -> DisplayList:
-        from core.drawing.display import Circle
-
         out = DisplayList()
         out.add(Text(16, 26, "Callouts", "serif-bold", 15, INK))
         y = 52.0
@@ -217,8 +215,6 @@ class _Tables:
         return out
 
     def _legend(self, out: DisplayList, y: float) -> None:
-        from core.drawing.display import Circle
-
         x = 16.0
         label = "gauge: decades of rows"
         out.add(Text(x, y, label, "sans", 10, SOFT))

@@ -6,7 +6,7 @@ import math
 from dataclasses import dataclass
 
 from core.algebra.graph import attributes
-from core.algebra.notation import Naming, condition_text, sign, sign_mark
+from core.algebra.notation import Naming, condition_text, scalar_text, sign, sign_mark
 from core.algebra.operators import Operator, Project, Relation
 from core.algebra.scalars import Ref
 from core.catalog.model import Catalog
@@ -91,8 +91,6 @@ def plate_of(
 
 def _extended(operator: Operator, naming: Naming) -> str:
     """A projection that keeps everything and adds columns: only the new ones are worth reading."""
-    from core.algebra.notation import scalar_text
-
     if not isinstance(operator, Project):
         return ""
     kept = [c for c in operator.columns if c.value == Ref(c.attribute)]

@@ -87,7 +87,7 @@ def improve(
         current, cost = chain[-1].formulation, chain[-1].after
         if progress is not None:
             progress(min(0.99, 1 - search.left() / seconds), f"{len(chain)} rewrites")
-    return chain + _tidied(current, cost, search.facts) if chain else chain
+    return chain + search.tidied(current, cost) if chain else chain
 
 
 @dataclass(frozen=True, slots=True)
@@ -154,24 +154,23 @@ class _Search:
         lowest = min(range(len(steps)), key=lambda i: steps[i].after)
         return steps[: lowest + 1]
 
-
-def _tidied(current: Formulation, cost: float, facts: Facts) -> list[Revision]:
-    """What has become needless on the way: rewrites that save work which the total of rows does not show."""
-    found: list[Revision] = []
-    rules = [rule for rule in RULES if rule.name in _TIDYING]
-    while len(found) < 12:
-        context = Context(current, facts)
-        offer = next(
-            (a for op in current.operators() for a in attempts(context, op, rules) if isinstance(a, Offer)), None
-        )
-        if offer is None:
-            break
-        after = total_rows(offer.after, size(offer.after, facts.catalog, facts=facts))
-        if after > cost * (1 + _SETTLING):
-            break
-        found.append(Revision(offer, cost, after))
-        current, cost = offer.after, after
-    return found
+    def tidied(self, current: Formulation, cost: float) -> list[Revision]:
+        """What has become needless on the way: rewrites that save work which the total of rows does not show."""
+        found: list[Revision] = []
+        rules = [rule for rule in RULES if rule.name in _TIDYING]
+        while len(found) < 12:
+            context = Context(current, self.facts)
+            offer = next(
+                (a for op in current.operators() for a in attempts(context, op, rules) if isinstance(a, Offer)), None
+            )
+            if offer is None:
+                break
+            after = self.cost(offer.after)
+            if after > cost * (1 + _SETTLING):
+                break
+            found.append(Revision(offer, cost, after))
+            current, cost = offer.after, after
+        return found
 
 
 def _text(formulation: Formulation) -> str:

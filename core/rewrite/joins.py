@@ -5,7 +5,7 @@ from __future__ import annotations
 from core.algebra.functions import volatile
 from core.algebra.graph import attributes, dependent, postorder, scalars
 from core.algebra.notation import scalar_text
-from core.algebra.operators import Join, JoinKind, Operator, Relation, Select
+from core.algebra.operators import Distinct, Join, JoinKind, Limit, Nest, Operator, Relation, Select, Sort, Window
 from core.algebra.scalars import (
     Attribute,
     IsNull,
@@ -15,7 +15,7 @@ from core.algebra.scalars import (
     conjuncts,
     refs,
 )
-from core.derive.reject import rejects_null
+from core.derive.reject import rejects_null, rejects_null_each
 from core.rewrite.context import Context
 from core.rewrite.rule import Attempt, Check, Rule, check
 from core.size.guarantee import always_matched, equalities
@@ -225,8 +225,6 @@ def _from_semi_join(operator: Operator, context: Context) -> Attempt | None:
 
 
 def takes_whole_schema(operator: Operator, context: Context) -> bool:
-    from core.algebra.operators import Distinct, Limit, Nest, Sort, Window
-
     pending, seen = [operator], set()
     while pending:
         current = pending.pop()
@@ -323,8 +321,6 @@ def _null_test(operator: Operator, context: Context) -> Attempt | None:
 
 def _shown_present(join: Join) -> frozenset[Attribute]:
     """Right attributes that the join condition shows to be not NULL in a partner."""
-    from core.derive.reject import rejects_null_each
-
     return rejects_null_each(join.condition)
 
 

@@ -20,8 +20,11 @@ from core.algebra.operators import (
 )
 from core.algebra.scalars import (
     Aggregate,
+    Case,
+    Cast,
     Comparison,
     ComparisonOperator,
+    IsNull,
     Literal,
     Ref,
     Scalar,
@@ -152,8 +155,6 @@ def _group_on_key(operator: Operator, context: Context) -> Attempt | None:
 
 
 def _of_one_row(call: Aggregate) -> Scalar | None:
-    from core.algebra.scalars import Case, Cast, IsNull
-
     if call.condition is not None or call.order:
         return None
     if call.name == "count" and not call.arguments:

@@ -8,7 +8,7 @@ from dataclasses import dataclass, field, replace
 from datetime import date
 
 from core.algebra.formulation import Formulation
-from core.algebra.graph import inputs
+from core.algebra.graph import inputs, rebuilt
 from core.algebra.operators import Operator
 from core.catalog.model import Catalog
 from core.language.diagnostic import Diagnostic
@@ -119,8 +119,6 @@ def rewritten(draft: Draft, offer: Offer) -> Draft:
 
 def followed(operator: Operator, offer: Offer) -> Operator:
     """What stands for an operator after a rewrite: the same object, what it was rebuilt as, or what replaced it."""
-    from core.algebra.graph import rebuilt
-
     _, became = rebuilt((*_roots(offer), operator), {offer.operator: offer.became})
     return became.get(operator, operator)
 

@@ -7,8 +7,6 @@ the rules give; each also keeps its SQL, for readers without Planimeter.
 from __future__ import annotations
 
 import json
-import os
-import tempfile
 from dataclasses import replace
 from datetime import date
 from pathlib import Path
@@ -22,6 +20,7 @@ from core.language.sql.read import read_sql
 from core.language.sql.write import WriteError, write_sql
 from core.rewrite import Offer, rewrites, rule_named
 from core.sheet.document import Callout, Draft, Revision, Sheet, rewritten
+from core.whole_file import write_whole
 
 FORMAT = "planimeter sheet 1"
 
@@ -158,17 +157,7 @@ def _noted(part: dict[str, Any], sheet: Sheet) -> Callout | None:
 
 def save(sheet: Sheet, path: str | Path) -> None:
     """Writes the file so that a crash leaves the old one or the new one, never half of either."""
-    target = Path(path)
-    handle, temporary = tempfile.mkstemp(dir=target.parent, prefix=target.name, suffix=".part")
-    try:
-        with os.fdopen(handle, "w", encoding="utf-8") as stream:
-            stream.write(to_json(sheet))
-            stream.flush()
-            os.fsync(stream.fileno())
-        os.replace(temporary, target)
-    except BaseException:
-        Path(temporary).unlink(missing_ok=True)
-        raise
+    write_whole(path, to_json(sheet))
 
 
 def load(path: str | Path) -> Sheet:

@@ -43,11 +43,13 @@ from core.algebra.scalars import (
     Ref,
     Scalar,
     conjuncts,
+    refs,
 )
 from core.algebra.typing import type_of
 from core.catalog.model import Catalog
 from core.derive.comparing import decides, one_value
 from core.derive.facts import Facts
+from core.derive.lineage import base_of
 
 
 @dataclass(frozen=True, slots=True)
@@ -185,8 +187,6 @@ def _select(below: Bounds, condition: Scalar, facts: Facts, operator: Select) ->
 
 
 def _reads(scalar: Scalar, own: set[Attribute]) -> bool:
-    from core.algebra.scalars import refs
-
     return bool(refs(scalar) & own)
 
 
@@ -300,8 +300,6 @@ def always_matched(operator: Join, facts: Facts) -> bool:
     pairs = equalities(operator.condition, a, b)
     if not pairs or len(pairs) != len(conjuncts(operator.condition)):
         return False
-    from core.derive.lineage import base_of
-
     bases = base_of(operator.left)
     sure = facts.of(operator.left).never_null
     origins = [(bases.get(mine), names.get(theirs)) for mine, theirs in pairs]

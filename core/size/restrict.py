@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
+from dataclasses import replace
 
 from core.algebra.scalars import (
     MIRRORED,
@@ -52,8 +53,6 @@ def restricted(
 
 def _thinned(old: Distribution, new: Distribution, rows: float, share: float) -> Distribution:
     """The narrowed distribution, with no more values than the rows that are left can hold."""
-    from dataclasses import replace
-
     own = _kept(old, new)
     left = remaining_distinct(new.distinct, rows * own, min(1.0, share / own) if own > 0 else 0.0)
     return replace(new, distinct=left, domain=new.values)
@@ -94,8 +93,6 @@ def _narrowed(term: Scalar, spread: Mapping[Attribute, Distribution]) -> Sequenc
 
 
 def _only_null(found: Distribution) -> Distribution:
-    from dataclasses import replace
-
     return replace(found, distinct=0.0, domain=None, null_share=1.0, heavy=(), bounds=(), texts=(), samples=())
 
 

@@ -35,7 +35,7 @@ from core.size.equalities import Share, Spread, equality_share, pair_line
 from core.size.model import Line, figure, product_text, sum_text
 from core.size.restrict import bound_of
 from core.size.tried import tried, unwrapped
-from core.size.values import constant, number
+from core.size.values import constant, number, same_value
 
 EQUAL_GUESS = 0.1
 RANGE_GUESS = 1 / 3
@@ -282,8 +282,6 @@ def _of_normal(found: Distribution, upper: bool, place: float, text: str) -> Sha
 
 
 def _equal_formula(found: Distribution, value: object, share: float) -> tuple[str, float]:
-    from core.size.values import same_value
-
     if any(same_value(known, value) for known, _ in found.heavy):  # type: ignore[arg-type]
         return figure(share), share
     if share == 0:

@@ -10,9 +10,7 @@ from dataclasses import dataclass, field
 from enum import IntEnum
 
 from core.algebra.operators import (
-    Join,
     JoinKind,
-    Operator,
     Relation,
     SetKind,
     TableFunction,
@@ -159,9 +157,3 @@ def derived(query: Query, alias: str = "") -> Block:
     """A new block that selects from the query as a derived table."""
     item = Item(query, query.columns, alias or query.alias)
     return Block([item], query.columns)
-
-
-def is_join_term(operator: Operator) -> bool:
-    """Joins that SQL writes as conditions or values."""
-    kinds = (JoinKind.SEMI, JoinKind.ANTI, JoinKind.MARK, JoinKind.SINGLE)
-    return isinstance(operator, Join) and operator.kind in kinds
