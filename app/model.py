@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from dataclasses import dataclass, field, replace
 from pathlib import Path
 
@@ -27,6 +28,7 @@ from core.size import Size, size
 from core.size.numbers import bytes_text, ratio_text, rows_text
 
 _MOST_BALLOONS = 4
+_UNMEASURED: Mapping[Operator, int] = {}
 
 
 @dataclass(slots=True)
@@ -77,7 +79,11 @@ class Workbench(QObject):
         return drafts if self.beside else [d for d in drafts if d.letter == self.active]
 
     def sizes(self, formulation: Formulation) -> dict[Operator, Size]:
-        catalog, measured = self.sheet.catalog, self.sheet.measured
+        """Sizes with the counts that were measured."""
+        return self._sized(formulation, self.sheet.measured or _UNMEASURED)
+
+    def _sized(self, formulation: Formulation, measured: Mapping[Operator, int]) -> dict[Operator, Size]:
+        catalog = self.sheet.catalog
         key = (formulation, id(catalog), id(measured))
         if key not in self._sizes:
             if len(self._sizes) > 60:
@@ -105,10 +111,15 @@ class Workbench(QObject):
         return rewrites(formulation, operator, Facts(self.sheet.catalog))
 
     def totals(self, offer: Offer) -> tuple[float, float]:
-        """The total of rows before a rewrite of the active draft, and after it."""
+        """The estimated total of rows before a rewrite of the active draft, and after it.
+
+        Estimates on both sides: what a rewrite makes is not measured yet, and a count set against an estimate would
+        show the estimate's error as the rewrite's effect.
+        """
         draft = self.draft
         assert draft is not None and draft.formulation is not None
-        return self.total(draft.formulation), self.total(offer.after)
+        before, after = (total_rows(f, self._sized(f, _UNMEASURED)) for f in (draft.formulation, offer.after))
+        return before, after
 
     def total(self, formulation: Formulation) -> float:
         """The rows out of all operators."""

@@ -219,6 +219,21 @@ def test_rewrites_that_save_most_stand_first_however_much_they_save(qtbot: QtBot
     assert most >= 1000
 
 
+def test_a_count_is_not_set_against_an_estimate(window: Window) -> None:
+    """Exchanging the sides of a join changes no total, however far the counts are from the estimates."""
+    bench = window.bench
+    join = exploding(window)
+    formulation = bench.sheet.drafts[0].formulation
+    assert formulation is not None
+    bench.amend(measured={o: round(100 * s.rows) + 7 for o, s in bench.sizes(formulation).items()})
+    bench.select(join, "A")
+    offers = [a for a in bench.answers(join) if isinstance(a, Offer) and a.rule.name == "commute-join"]
+    assert offers
+    for offer in offers:
+        before, after = bench.totals(offer)
+        assert before == pytest.approx(after)
+
+
 def test_a_disabled_action_says_why(window: Window) -> None:
     action = window.actions_by_method["compare"]
     assert not action.isEnabled()
